@@ -1,0 +1,56 @@
+"""Pinlight: calibrator stars for optical and infrared interferometry, ranked by what they cost."""
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+from pinlight.version import __version__
+
+if TYPE_CHECKING:
+    from pinlight.arrays.files import Array, load_array
+    from pinlight.catalogue.store import Catalogue, make_catalogue, open_catalogue
+    from pinlight.errors import CatalogueError, InputError, NotFoundError, PinlightError
+    from pinlight.faces.library import rank
+    from pinlight.ranking.result import Ranking
+    from pinlight.ranking.target import Target
+
+__all__ = [
+    "Array",
+    "Catalogue",
+    "CatalogueError",
+    "InputError",
+    "NotFoundError",
+    "PinlightError",
+    "Ranking",
+    "Target",
+    "__version__",
+    "load_array",
+    "make_catalogue",
+    "open_catalogue",
+    "rank",
+]
+
+# Public name -> module, imported when first asked for: the command line starts in a blink.
+_HOMES = {
+    "Array": "pinlight.arrays.files",
+    "Catalogue": "pinlight.catalogue.store",
+    "CatalogueError": "pinlight.errors",
+    "InputError": "pinlight.errors",
+    "NotFoundError": "pinlight.errors",
+    "PinlightError": "pinlight.errors",
+    "Ranking": "pinlight.ranking.result",
+    "Target": "pinlight.ranking.target",
+    "load_array": "pinlight.arrays.files",
+    "make_catalogue": "pinlight.catalogue.store",
+    "open_catalogue": "pinlight.catalogue.store",
+    "rank": "pinlight.faces.library",
+}
+
+
+def __getattr__(name: str) -> Any:
+    if name in _HOMES:
+        return getattr(import_module(_HOMES[name]), name)
+    raise AttributeError(f"module 'pinlight' has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted(__all__)

@@ -1,0 +1,1 @@
+"""Arrays: their files and their geometry."""

@@ -1,0 +1,1 @@
+"""The team's catalogue: tables, names, the seed, editions. Only this package knows SQLAlchemy."""

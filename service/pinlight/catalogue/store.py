@@ -1,0 +1,412 @@
+"""The catalogue: making it, opening it, looking stars up."""
+
+import json
+import os
+from collections.abc import Callable
+from contextlib import contextmanager
+from datetime import UTC, datetime
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+from sqlalchemy import Engine, create_engine, event, func, insert, inspect, select, text
+from sqlalchemy.engine import URL, make_url
+from sqlalchemy.exc import ArgumentError, DBAPIError, SQLAlchemyError
+
+from pinlight.catalogue.editions import open_edition
+from pinlight.catalogue.names import name_key
+from pinlight.catalogue.tables import (
+    SCHEMA,
+    Companion,
+    Diameter,
+    Edition,
+    Identifier,
+    Magnitude,
+    Source,
+    Standing,
+    Star,
+)
+from pinlight.errors import CatalogueError, InputError, NotFoundError
+from pinlight.ranking.columns import StarColumns
+
+__all__ = ["STANDINGS", "Catalogue", "default_url", "make_catalogue", "open_catalogue"]
+
+STANDINGS = ("vouched", "unproven", "doubted", "barred")
+_MOST_CHOICES = 8
+
+
+def default_url() -> str:
+    """`PINLIGHT_DB`, or a file in the user's data folder."""
+    from platformdirs import user_data_path
+
+    return os.environ.get("PINLIGHT_DB") or f"sqlite:///{user_data_path('pinlight') / 'pinlight.db'}"
+
+
+def _parse_url(url: str | None) -> tuple[URL, Path]:
+    """The URL and the file behind it; a plain path counts as a file."""
+    given = url or default_url()
+    try:
+        parsed = make_url(given if ":" in given else f"sqlite:///{given}")
+    except ArgumentError as error:
+        raise InputError(f"db is {given!r}; write sqlite:///FILE or a file name") from error
+    if parsed.get_backend_name() != "sqlite" or not parsed.database or parsed.database == ":memory:":
+        raise InputError(f"db is {given!r}; this version keeps catalogues in files: write sqlite:///FILE")
+    return parsed, Path(parsed.database)
+
+
+@contextmanager
+def _database_errors(path: Path, doing: str) -> Any:
+    """Driver errors become one line that says which file and what to do."""
+    try:
+        yield
+    except (DBAPIError, OSError) as error:
+        reason = str(getattr(error, "orig", None) or getattr(error, "strerror", None) or error)
+        raise CatalogueError(f"cannot {doing} catalogue {path}: {reason}; nothing was changed") from error
+    except SQLAlchemyError as error:
+        raise CatalogueError(f"cannot {doing} catalogue {path}: {error}") from error
+
+
+def _engine(path: Path) -> Engine:
+    engine = create_engine(f"sqlite:///{path}", connect_args={"timeout": 30})
+
+    @event.listens_for(engine, "connect")
+    def _settings(connection: Any, _record: Any) -> None:
+        connection.execute("PRAGMA foreign_keys = ON")
+
+    return engine
+
+
+def _schema_of(engine: Engine) -> str | None:
+    """The revision of a database, None for one that holds no catalogue."""
+    with engine.connect() as connection:
+        if not inspect(connection).has_table("alembic_version"):
+            return None
+        revision = connection.execute(text("SELECT version_num FROM alembic_version")).scalar()
+        return str(revision) if revision else None
+
+
+def _refuse_newer(schema: str, path: Path) -> None:
+    if schema > SCHEMA:
+        raise CatalogueError(
+            f"catalogue {path} was made by a newer Pinlight (schema {schema}, this one knows {SCHEMA}); "
+            "install that version"
+        )
+
+
+def make_catalogue(
+    url: str | None = None, *, seed: bool = True, progress: Callable[[str], object] = str
+) -> "Catalogue":
+    """Make the catalogue, or bring an existing one to the newest schema, and open it.
+
+    A new catalogue is built aside and renamed when complete: another process sees all of it or
+    none, and two that make the same one end with one. `seed` fills a new one with the stars
+    that Pinlight ships and freezes the first edition.
+
+    Raises
+    ------
+    InputError
+        If the URL is none that this version can keep a catalogue at.
+    CatalogueError
+        If the place cannot be written, or holds something else or newer.
+    """
+    from filelock import FileLock
+
+    _, path = _parse_url(url)
+    with _database_errors(path, "make"):
+        path.parent.mkdir(parents=True, exist_ok=True)
+        with FileLock(f"{path}.lock"):
+            if path.exists() and path.stat().st_size > 0:
+                _migrate(path)
+            else:
+                _build(path, seed, progress)
+    return open_catalogue(url)
+
+
+def _migrate(path: Path) -> None:
+    from pinlight.catalogue.schema import upgrade
+
+    engine = _engine(path)
+    try:
+        schema = _schema_of(engine)
+        if schema is None:
+            raise CatalogueError(f"{path} is a database, but no Pinlight catalogue; choose another file")
+        _refuse_newer(schema, path)
+        if schema < SCHEMA:
+            with engine.begin() as connection:
+                upgrade(connection)
+    finally:
+        engine.dispose()
+
+
+def _build(path: Path, seed: bool, progress: Callable[[str], object]) -> None:
+    from pinlight.catalogue.schema import upgrade
+    from pinlight.catalogue.seed import fill_from_seed
+
+    for left_over in path.parent.glob(f"{path.name}.unfinished*"):
+        left_over.unlink()
+    aside = path.with_name(f"{path.name}.unfinished")
+    engine = _engine(aside)
+    try:
+        with engine.connect() as connection:
+            connection.exec_driver_sql("PRAGMA journal_mode = WAL")
+        with engine.begin() as connection:
+            upgrade(connection)
+            if seed:
+                fill_from_seed(connection, progress)
+        catalogue = Catalogue(path, engine)
+        if seed:
+            progress("freezing the first edition")
+            catalogue.freeze()
+        with engine.connect() as connection:
+            connection.exec_driver_sql("PRAGMA wal_checkpoint(TRUNCATE)")
+        engine.dispose()
+        os.replace(aside, path)
+    finally:
+        engine.dispose()
+        for left_over in path.parent.glob(f"{path.name}.unfinished*"):
+            left_over.unlink()
+
+
+def open_catalogue(url: str | None = None) -> "Catalogue":
+    """Open an existing catalogue.
+
+    Raises
+    ------
+    InputError
+        If the URL is none that this version can keep a catalogue at.
+    CatalogueError
+        If there is no catalogue, or one of another schema.
+    """
+    _, path = _parse_url(url)
+    if not path.is_file():
+        raise CatalogueError(f"there is no catalogue at {path}; run 'pinlight init' to make one")
+    engine = _engine(path)
+    with _database_errors(path, "open"):
+        schema = _schema_of(engine)
+    if schema is None:
+        raise CatalogueError(f"{path} is no Pinlight catalogue; run 'pinlight init --db FILE' to make one")
+    _refuse_newer(schema, path)
+    if schema < SCHEMA:
+        raise CatalogueError(f"catalogue {path} has schema {schema}; run 'pinlight init' to renew it")
+    return Catalogue(path, engine)
+
+
+class Catalogue:
+    """An open catalogue: rankings read its columns, people ask it for stars."""
+
+    def __init__(self, path: Path, engine: Engine) -> None:
+        self.path = path
+        self._engine = engine
+        self._open_editions: dict[str, StarColumns] = {}
+
+    def close(self) -> None:
+        """Let go of the database."""
+        self._engine.dispose()
+
+    @cached_property
+    def editions_folder(self) -> Path:
+        """Where the edition files are."""
+        chosen = os.environ.get("PINLIGHT_EDITIONS")
+        return Path(chosen) if chosen else self.path.with_name(f"{self.path.name}.editions")
+
+    def freeze(self) -> str:
+        """Write the present content as an edition and return its name."""
+        from pinlight.catalogue.editions import write_edition
+
+        with _database_errors(self.path, "write to"), self._engine.begin() as connection:
+            name, facts = write_edition(connection, self.editions_folder)
+            if not connection.execute(select(Edition.name).where(Edition.name == name)).first():
+                connection.execute(
+                    insert(Edition).values(
+                        name=name,
+                        made_utc=datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ"),
+                        star_count=facts["stars"],
+                        relation_set=" ".join(facts["relation_sets"]),
+                    )
+                )
+        return name
+
+    def editions(self) -> list[dict[str, Any]]:
+        """All editions, newest first."""
+        query = select(Edition.name, Edition.made_utc, Edition.star_count, Edition.relation_set)
+        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+            rows = connection.execute(query.order_by(Edition.made_utc.desc(), Edition.name)).mappings().all()
+        return [dict(row) for row in rows]
+
+    def columns(self, edition: str | None = None) -> StarColumns:
+        """The columns of an edition, by default the newest.
+
+        Raises
+        ------
+        NotFoundError
+            If there is no such edition.
+        """
+        known = [row["name"] for row in self.editions()]
+        if not known:
+            raise CatalogueError(f"catalogue {self.path} has no edition yet; add stars and freeze one")
+        name = edition or known[0]
+        if name not in known:
+            raise NotFoundError(f"edition is {name!r}; the catalogue has {', '.join(known[:_MOST_CHOICES])}")
+        if name not in self._open_editions:
+            self._open_editions[name] = open_edition(self.editions_folder, name)
+        return self._open_editions[name]
+
+    def find(self, name: str) -> int:
+        """The id of the star of that name; case, blanks, dots and ways of writing Greek do not matter.
+
+        Raises
+        ------
+        InputError
+            If several stars bear the name; the message lists them.
+        NotFoundError
+            If none does; the message suggests near misses.
+        """
+        key = name_key(name)
+        if not key:
+            raise InputError(f"name is {name!r}; write a star's name, such as 'HD 10700' or 'tau Cet'")
+        query = (
+            select(Star.id, Star.name, Identifier.short)
+            .join(Identifier, Identifier.star_id == Star.id)
+            .where(Identifier.key == key)
+            .order_by(Star.name)
+        )
+        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+            rows = connection.execute(query).all()
+        exact = [row for row in rows if not row.short] or rows
+        if len(exact) == 1:
+            return int(exact[0].id)
+        if exact:
+            names = [row.name for row in exact]
+            shown = ", ".join(names[:_MOST_CHOICES]) + (", …" if len(names) > _MOST_CHOICES else "")
+            raise InputError(f"name {name!r} may be any of {shown}; give one of them")
+        near = self._near_misses(key)
+        hint = f"did you mean {' or '.join(near)}?" if near else "give its coordinates instead"
+        raise NotFoundError(f"no star is named {name!r}; {hint}")
+
+    def _near_misses(self, key: str, most: int = 3) -> list[str]:
+        from rapidfuzz import fuzz, process
+
+        query = select(Identifier.key, Identifier.name).where(~Identifier.short)
+        with self._engine.connect() as connection:
+            names = {row.key: row.name for row in connection.execute(query)}
+        near = process.extract(key, names.keys(), scorer=fuzz.ratio, limit=most, score_cutoff=75)
+        return [names[found] for found, _, _ in near]
+
+    def standings(self) -> dict[int, str]:
+        """The newest standing of every star that has one, by star id."""
+        newest = select(func.max(Standing.id)).group_by(Standing.star_id)
+        query = select(Standing.star_id, Standing.standing).where(Standing.id.in_(newest))
+        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+            return {row.star_id: row.standing for row in connection.execute(query)}
+
+    def set_standing(self, star_id: int, standing: str, reason: str, made_by: str) -> None:
+        """Add a judgement of a star; earlier ones stay on record.
+
+        Raises
+        ------
+        InputError
+            If the standing is unknown or the reason empty.
+        NotFoundError
+            If there is no such star.
+        """
+        if standing not in STANDINGS:
+            raise InputError(f"standing is {standing!r}; it may be one of {', '.join(STANDINGS)}")
+        if not reason.strip():
+            raise InputError("reason is empty; say why")
+        now = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ")
+        with _database_errors(self.path, "write to"), self._engine.begin() as connection:
+            if connection.execute(select(Star.id).where(Star.id == star_id)).first() is None:
+                raise NotFoundError(f"star_id is {star_id}; there is no such star")
+            connection.execute(
+                insert(Standing).values(
+                    star_id=star_id, standing=standing, reason=reason.strip(), made_by=made_by, made_utc=now
+                )
+            )
+
+    def star(self, star_id: int) -> dict[str, Any]:
+        """All that is known of one star, ready for JSON.
+
+        Raises
+        ------
+        NotFoundError
+            If there is no such star.
+        """
+        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+
+            def rows(*columns: Any, table: Any, order: Any = None) -> list[dict[str, Any]]:
+                query = select(*columns).where(table.star_id == star_id).order_by(order)
+                return [dict(row) for row in connection.execute(query).mappings()]
+
+            star = connection.execute(select(Star.__table__).where(Star.id == star_id)).mappings().first()
+            if star is None:
+                raise NotFoundError(f"star_id is {star_id}; there is no such star")
+            sources = {row.id: row for row in connection.execute(select(Source.__table__))}
+            names = rows(Identifier.name, Identifier.short, table=Identifier, order=Identifier.id)
+            magnitudes = rows(Magnitude.__table__, table=Magnitude)
+            companions = rows(
+                Companion.neighbour_id, Companion.separation_arcsec, Companion.delta_v_mag,
+                Companion.delta_ks_mag, table=Companion, order=Companion.separation_arcsec,
+            )  # fmt: skip
+            diameter = rows(Diameter.__table__, table=Diameter)
+            standings = rows(
+                Standing.standing, Standing.reason, Standing.made_by, Standing.made_utc,
+                table=Standing, order=Standing.id,
+            )  # fmt: skip
+            neighbours = [row["neighbour_id"] for row in companions]
+            neighbour_names = dict(
+                connection.execute(select(Star.id, Star.name).where(Star.id.in_(neighbours))).tuples().all()
+            )
+        identifiers = dict.fromkeys(row["name"] for row in names if not row["short"])
+        return {
+            "star_id": star["id"],
+            "name": star["name"],
+            "identifiers": sorted(identifiers, key=lambda name: name != star["name"]),
+            **{
+                key: star[key]
+                for key in (
+                    "ra_deg", "dec_deg", "pm_ra_mas_yr", "pm_dec_mas_yr", "parallax_mas",
+                    "radial_velocity_km_s", "spectral_type",
+                )
+            },
+            "flags": star["flags"].split(),
+            "magnitudes": {
+                row["band"]: {
+                    "value": row["value"],
+                    "error": row["error"],
+                    "error_assumed": row["error_assumed"],
+                    "source": sources[row["source_id"]].title,
+                }
+                for row in sorted(magnitudes, key=lambda row: "BVRIJHKs".find(row["band"]))
+            },
+            "companions": [
+                {**row, "name": neighbour_names.get(row["neighbour_id"])} for row in companions
+            ],
+            "diameter": self._diameter_facts(diameter[0]) if diameter else None,
+            "standing": standings[-1]["standing"] if standings else None,
+            "standings": standings,
+            "source": sources[star["source_id"]].title,
+        }  # fmt: skip
+
+    @staticmethod
+    def _diameter_facts(row: dict[str, Any]) -> dict[str, Any] | None:
+        if row["limb_darkened_mas"] is None:
+            return None
+        theta = row["limb_darkened_mas"]
+        own, shared = row["own_error_mas"], row["shared_error_mas"]
+        return {
+            "limb_darkened_mas": theta,
+            "own_error_mas": own,
+            "shared_error_mas": shared,
+            "error_mas": round((own**2 + shared**2) ** 0.5, 6),
+            **{
+                key: row[key]
+                for key in (
+                    "chi_squared", "degrees_of_freedom", "probability", "discordant", "culprit", "av_mag",
+                    "av_error_mag", "luminosity_group", "teff_k", "logg", "relation_set",
+                )
+            },
+            "relations": [
+                {"relation": name, "diameter_mas": round(10**log_theta, 5), "weight": weight, "pull": pull}
+                for name, (log_theta, weight, pull) in json.loads(row["parts"]).items()
+            ],
+        }  # fmt: skip

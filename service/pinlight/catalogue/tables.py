@@ -1,0 +1,157 @@
+"""The tables of the catalogue."""
+
+from sqlalchemy import ForeignKey, Index, MetaData
+from sqlalchemy.orm import DeclarativeBase, Mapped, mapped_column
+
+__all__ = [
+    "SCHEMA",
+    "Base",
+    "Companion",
+    "Diameter",
+    "Edition",
+    "Identifier",
+    "Magnitude",
+    "Source",
+    "Standing",
+    "Star",
+]
+
+# The newest migration; a test holds it against the migrations folder.
+SCHEMA = "0001"
+
+
+class Base(DeclarativeBase):
+    """All tables; the convention names every constraint, so that migrations can."""
+
+    metadata = MetaData(
+        naming_convention={
+            "ix": "ix_%(table_name)s_%(column_0_N_name)s",
+            "uq": "uq_%(table_name)s_%(column_0_N_name)s",
+            "ck": "ck_%(table_name)s_%(constraint_name)s",
+            "fk": "fk_%(table_name)s_%(column_0_name)s_%(referred_table_name)s",
+            "pk": "pk_%(table_name)s",
+        }
+    )
+
+
+class Source(Base):
+    """Where values come from."""
+
+    __tablename__ = "source"
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    title: Mapped[str] = mapped_column(unique=True)
+    reference: Mapped[str]
+    licence: Mapped[str]
+    retrieved: Mapped[str]
+
+
+class Star(Base):
+    """One star; position in ICRS at epoch 2000, `flags` words separated by blanks."""
+
+    __tablename__ = "star"
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    name: Mapped[str]
+    ra_deg: Mapped[float]
+    dec_deg: Mapped[float]
+    pm_ra_mas_yr: Mapped[float | None]
+    pm_dec_mas_yr: Mapped[float | None]
+    parallax_mas: Mapped[float | None]
+    radial_velocity_km_s: Mapped[float | None]
+    spectral_type: Mapped[str]
+    object_type: Mapped[str]
+    flags: Mapped[str]
+    cell: Mapped[int] = mapped_column(index=True)
+    source_id: Mapped[int] = mapped_column(ForeignKey("source.id"))
+
+
+class Identifier(Base):
+    """A name of a star and the key it is found by; `short` marks keys that say less than the name."""
+
+    __tablename__ = "identifier"
+    __table_args__ = (Index(None, "key"), Index(None, "star_id"))
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    star_id: Mapped[int] = mapped_column(ForeignKey("star.id"))
+    name: Mapped[str]
+    key: Mapped[str]
+    short: Mapped[bool]
+    source_id: Mapped[int] = mapped_column(ForeignKey("source.id"))
+
+
+class Magnitude(Base):
+    """A star's magnitude in one band from one source; `error_assumed` where the source gave no error."""
+
+    __tablename__ = "magnitude"
+
+    star_id: Mapped[int] = mapped_column(ForeignKey("star.id"), primary_key=True)
+    band: Mapped[str] = mapped_column(primary_key=True)
+    source_id: Mapped[int] = mapped_column(ForeignKey("source.id"), primary_key=True)
+    value: Mapped[float]
+    error: Mapped[float]
+    error_assumed: Mapped[bool]
+
+
+class Companion(Base):
+    """A neighbour on the sky; differences are neighbour minus star, positive when it is fainter."""
+
+    __tablename__ = "companion"
+    __table_args__ = (Index(None, "star_id"),)
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    star_id: Mapped[int] = mapped_column(ForeignKey("star.id"))
+    neighbour_id: Mapped[int | None] = mapped_column(ForeignKey("star.id"))
+    separation_arcsec: Mapped[float]
+    delta_v_mag: Mapped[float | None]
+    delta_ks_mag: Mapped[float | None]
+    source_id: Mapped[int] = mapped_column(ForeignKey("source.id"))
+
+
+class Diameter(Base):
+    """A star's predicted diameter; `parts` is JSON: relation -> [log theta, weight, pull]."""
+
+    __tablename__ = "diameter"
+
+    star_id: Mapped[int] = mapped_column(ForeignKey("star.id"), primary_key=True)
+    limb_darkened_mas: Mapped[float | None]
+    own_error_mas: Mapped[float | None]
+    shared_error_mas: Mapped[float | None]
+    chi_squared: Mapped[float | None]
+    degrees_of_freedom: Mapped[int]
+    probability: Mapped[float | None]
+    discordant: Mapped[bool]
+    culprit: Mapped[str | None]
+    av_mag: Mapped[float]
+    av_error_mag: Mapped[float]
+    luminosity_group: Mapped[str]
+    spectral_code: Mapped[float | None]
+    teff_k: Mapped[float | None]
+    logg: Mapped[float | None]
+    relation_set: Mapped[str]
+    parts: Mapped[str]
+
+
+class Standing(Base):
+    """A judgement of a star; rows are only ever added, the newest of a star counts."""
+
+    __tablename__ = "standing"
+    __table_args__ = (Index(None, "star_id"),)
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    star_id: Mapped[int] = mapped_column(ForeignKey("star.id"))
+    standing: Mapped[str]
+    reason: Mapped[str]
+    made_by: Mapped[str]
+    made_utc: Mapped[str]
+
+
+class Edition(Base):
+    """A frozen state of the catalogue; its name is the beginning of its content's hash."""
+
+    __tablename__ = "edition"
+
+    name: Mapped[str] = mapped_column(primary_key=True)
+    made_utc: Mapped[str]
+    star_count: Mapped[int]
+    relation_set: Mapped[str]

@@ -1,0 +1,1 @@
+"""Angular diameters: relations, prediction, limb darkening, oblateness."""

@@ -1,0 +1,334 @@
+"""The calls that every face makes."""
+
+import csv
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from pinlight.arrays.files import Array, load_array
+from pinlight.catalogue.store import Catalogue
+from pinlight.diameters.limb_darkening import coefficients_at, uniform_disk_ratio
+from pinlight.diameters.prediction import StarPhotometry, predict_diameters
+from pinlight.diameters.relations import load_relations
+from pinlight.errors import InputError, NotFoundError
+from pinlight.photometry.bands import BANDS, check_magnitude, default_errors
+from pinlight.photometry.bands import band as band_of
+from pinlight.photometry.systems import CATALOGUE_BANDS
+from pinlight.ranking.rank import rank as rank_columns
+from pinlight.ranking.result import Ranking
+from pinlight.ranking.setup import Setup, quick_setup, setup_of
+from pinlight.ranking.target import Target
+from pinlight.resources import seed_folder
+from pinlight.sky.positions import (
+    check_position,
+    galactic_latitude_deg,
+    looks_like_coordinates,
+    parse_coordinates,
+)
+
+__all__ = [
+    "find_array",
+    "known_arrays",
+    "make_setup",
+    "named_array",
+    "predict_diameter",
+    "rank",
+    "read_targets",
+    "resolve_target",
+]
+
+
+def rank(
+    catalogue: Catalogue,
+    target: str | Target,
+    *,
+    array: str | Path | Array | None = None,
+    stations: list[str] | None = None,
+    mode: str | None = None,
+    baseline_m: float | None = None,
+    wavelength_um: float | None = None,
+    separation_max_deg: float | None = None,
+    magnitude_max: float | None = None,
+    v2_min: float | None = None,
+    judge: str = "rms",
+    best: int = 20,
+    edition: str | None = None,
+) -> Ranking:
+    """Rank calibrators for a target, with an array or just a baseline and a wavelength.
+
+    Parameters
+    ----------
+    catalogue : Catalogue
+    target : str or Target
+        A star's name, coordinates as text, or a target of your own.
+    array : path, name or Array, optional
+        With `stations` (all by default) and `mode`.
+    baseline_m, wavelength_um : float, optional
+        The quick answer, in place of `array`.
+    separation_max_deg, magnitude_max, v2_min : float, optional
+        In place of the array's limits.
+    judge : str
+        ``rms`` over baselines and channels, or ``worst``.
+    best : int
+        How many to list.
+    edition : str, optional
+        The newest by default.
+
+    Returns
+    -------
+    Ranking
+
+    Raises
+    ------
+    InputError, NotFoundError
+        If something asked for is impossible or unknown.
+    CatalogueError
+        If the catalogue cannot be read.
+    """
+    setup = make_setup(array, stations, mode, baseline_m, wavelength_um)
+    return rank_columns(
+        catalogue.columns(edition),
+        resolve_target(catalogue, target),
+        setup,
+        limits=setup.limits.replace(separation_max_deg, v2_min, magnitude_max),
+        judge=judge,
+        best=best,
+        standings=catalogue.standings(),
+    )
+
+
+def make_setup(
+    array: str | Path | Array | None,
+    stations: list[str] | None,
+    mode: str | None,
+    baseline_m: float | None,
+    wavelength_um: float | None,
+) -> Setup:
+    """The setup of an array, or of one baseline at one wavelength.
+
+    Raises
+    ------
+    InputError
+        If neither or both are given, or either is impossible.
+    """
+    quick = {"baseline_m": baseline_m, "wavelength_um": wavelength_um}
+    given = [name for name, value in quick.items() if value is not None]
+    if array is not None:
+        if given:
+            raise InputError(f"array and {given[0]} are both given; give one or the other")
+        found = array if isinstance(array, Array) else find_array(array)
+        return setup_of(found, stations, mode)
+    for name, value in (("stations", stations), ("mode", mode)):
+        if value is not None:
+            raise InputError(f"{name} is given without an array; give the array too")
+    if baseline_m is None or wavelength_um is None:
+        missing = "array" if not given else next(name for name, value in quick.items() if value is None)
+        raise InputError(f"{missing} is missing; give an array, or both baseline_m and wavelength_um")
+    return quick_setup(baseline_m, wavelength_um)
+
+
+def known_arrays(folder: Path | None = None) -> dict[str, Array]:
+    """The arrays of a folder by file name, by default the invented ones that Pinlight ships."""
+    folder = folder or seed_folder() / "arrays"
+    return {path.stem: load_array(path) for path in sorted(folder.glob("*.toml"))}
+
+
+def named_array(name: str, arrays: Mapping[str, Array]) -> Array:
+    """One of `arrays` by its key or its full name.
+
+    Raises
+    ------
+    NotFoundError
+        If none is called so.
+    """
+    wanted = name.strip().casefold()
+    for key, array in arrays.items():
+        if wanted in (key.casefold(), array.name.casefold()):
+            return array
+    raise NotFoundError(f"array is {name!r}; it may be one of {', '.join(arrays)}")
+
+
+def find_array(name: str | Path) -> Array:
+    """An array by file, or one of those that Pinlight ships by name.
+
+    Raises
+    ------
+    NotFoundError
+        If there is no such array.
+    InputError
+        If the file is wrong.
+    """
+    if isinstance(name, Path) or Path(name).suffix == ".toml" or Path(name).is_file():
+        return load_array(name)
+    return named_array(name, known_arrays())
+
+
+def resolve_target(catalogue: Catalogue, target: str | Target) -> Target:
+    """A target from what a person wrote: coordinates, or a name known to the catalogue.
+
+    Raises
+    ------
+    InputError, NotFoundError
+        If it is neither.
+    """
+    if isinstance(target, Target):
+        return target
+    if looks_like_coordinates(target):
+        ra_deg, dec_deg = parse_coordinates(target)
+        return Target(ra_deg, dec_deg, name=target.strip())
+    star = catalogue.star(catalogue.find(target))
+    return Target(
+        star["ra_deg"],
+        star["dec_deg"],
+        name=star["name"],
+        magnitudes={band: entry["value"] for band, entry in star["magnitudes"].items()},
+        diameter_mas=star["diameter"]["limb_darkened_mas"] if star["diameter"] else None,
+        star_id=star["star_id"],
+    )
+
+
+def read_targets(path: Path) -> list[Target]:
+    """Targets from a CSV file with columns name, ra_deg, dec_deg and, if known, diameter_mas and bands.
+
+    Other columns are left to whoever needs them.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read or a row is wrong; the message names the line.
+    """
+    try:
+        with path.open(encoding="utf-8-sig", newline="") as file:
+            rows = list(csv.DictReader(file))
+    except (OSError, UnicodeDecodeError, csv.Error) as error:
+        reason = error.strerror if isinstance(error, OSError) else error
+        raise InputError(f"cannot read targets file {path}: {reason}") from error
+    if not rows:
+        raise InputError(f"targets file {path} has no rows; it needs columns name, ra_deg, dec_deg")
+    targets = []
+    for line, row in enumerate(rows, start=2):
+        for column in ("name", "ra_deg", "dec_deg"):
+            if not (row.get(column) or "").strip():
+                raise InputError(f"{path} line {line}: {column} is missing")
+        values: dict[str, float] = {}
+        for column in ("ra_deg", "dec_deg", "diameter_mas", *BANDS):
+            if written := (row.get(column) or "").strip():
+                try:
+                    values[column] = float(written)
+                except ValueError as error:
+                    message = f"{path} line {line}: {column} is {written!r}; it must be a number"
+                    raise InputError(message) from error
+        try:
+            targets.append(
+                Target(
+                    values["ra_deg"],
+                    values["dec_deg"],
+                    name=row["name"].strip(),
+                    magnitudes={band: values[band] for band in BANDS if band in values},
+                    diameter_mas=values.get("diameter_mas"),
+                )
+            )
+        except InputError as error:
+            raise InputError(f"{path} line {line}: {error}") from error
+    return targets
+
+
+def predict_diameter(
+    magnitudes: dict[str, float],
+    errors: dict[str, float] | None = None,
+    *,
+    spectral_type: str = "",
+    parallax_mas: float | None = None,
+    position_deg: tuple[float, float] | None = None,
+    av_mag: float | None = None,
+    band: str = "Ks",
+    name: str = "",
+) -> dict[str, Any]:
+    """A diameter from magnitudes, and how it came about, ready for JSON.
+
+    Parameters
+    ----------
+    magnitudes, errors : dict
+        Band -> magnitude; an error that is not given takes the band's default.
+    spectral_type : str, optional
+        Without one, parallax and colour tell a dwarf from a giant.
+    parallax_mas, position_deg : optional
+        For the extinction prior; without a parallax no extinction is assumed.
+    av_mag : float, optional
+        In place of the prior.
+    band : str
+        Where the uniform-disc diameter is wanted.
+
+    Raises
+    ------
+    InputError
+        If fewer than two bands are given, a value is impossible, or no relation applies.
+    """
+    errors = errors or {}
+    for key, value in magnitudes.items():
+        check_magnitude(key, value)
+        if key not in CATALOGUE_BANDS:
+            raise InputError(f"band {key} is not used by any relation yet; give {', '.join(CATALOGUE_BANDS)}")
+    for key, value in errors.items():
+        if not 0 < value < 5:
+            raise InputError(f"{key}_error is {value:g}; it must be positive and below 5 mag")
+        if key not in magnitudes:
+            raise InputError(f"{key}_error is given without {key}")
+    if len(magnitudes) < 2:
+        raise InputError(f"{len(magnitudes)} magnitude is given; a colour takes at least two bands")
+    if parallax_mas is not None and not 0 < parallax_mas < 1000:
+        raise InputError(f"parallax_mas is {parallax_mas:g}; it must lie between 0 and 1000")
+    if av_mag is not None and not 0 <= av_mag < 50:
+        raise InputError(f"av_mag is {av_mag:g}; it must lie between 0 and 50")
+    # Without a distance the prior would put the star behind all the dust there is.
+    av = (0.0 if parallax_mas is None else np.nan) if av_mag is None else av_mag
+    latitude = 90.0 if position_deg is None else float(galactic_latitude_deg(*check_position(*position_deg)))
+    values = np.array([[magnitudes.get(key, np.nan) for key in CATALOGUE_BANDS]])
+    assumed = np.stack([default_errors(key, values[:, i]) for i, key in enumerate(CATALOGUE_BANDS)], axis=1)
+    own = np.array([[errors.get(key, np.nan) for key in CATALOGUE_BANDS]])
+    relation_set = load_relations()
+    result = predict_diameters(
+        StarPhotometry(
+            magnitudes=values,
+            errors=np.where(np.isfinite(own), own, assumed),
+            spectral_types=[spectral_type],
+            parallax_mas=np.array([np.nan if parallax_mas is None else parallax_mas]),
+            galactic_latitude_deg=np.array([latitude]),
+            av_mag=np.array([av]),
+        ),
+        relation_set,
+    )
+    theta = float(result.limb_darkened_mas[0])
+    if not np.isfinite(theta):
+        kind = str(result.luminosity_group[0]) or "star of this type"
+        raise InputError(f"no published relation applies to a {kind} with these colours")
+    u = float(coefficients_at(band_of(band).wavelength_um, result.limb_darkening)[0])
+    used = result.relations_used(0)
+    return {
+        "name": name,
+        "diameter": {
+            "limb_darkened_mas": round(theta, 5),
+            "uniform_disk_mas": round(theta * float(uniform_disk_ratio(u)), 5),
+            "band": band,
+            "own_error_mas": round(float(result.own_error_mas[0]), 5),
+            "shared_error_mas": round(float(result.shared_error_mas[0]), 5),
+            "error_mas": round(float(result.error_mas[0]), 5),
+            "relations": used,
+            "discordant": bool(result.discordant[0]),
+        },
+        "luminosity_group": str(result.luminosity_group[0]),
+        "av_mag": round(float(result.av_mag[0]), 4),
+        "teff_k": round(float(result.teff_k[0])),
+        "relation_set": relation_set.hash,
+        "parts": [
+            {
+                "relation": relation,
+                "diameter_mas": round(float(10 ** result.log_thetas[0, index]), 5),
+                "weight": round(float(result.weights[0, index]), 4),
+            }
+            for index, relation in enumerate(relation_set.names)
+            if relation in used
+        ],
+    }

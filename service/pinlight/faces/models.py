@@ -1,0 +1,309 @@
+"""The HTTP interface's questions and answers, as models that also make its OpenAPI description."""
+
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field
+
+__all__ = [
+    "ArraysAnswer",
+    "HealthAnswer",
+    "Problem",
+    "RankingAnswer",
+    "RankingQuestion",
+    "StarAnswer",
+    "StarsAnswer",
+    "StarsQuestion",
+    "TargetQuestion",
+]
+
+
+class _Question(BaseModel):
+    model_config = ConfigDict(extra="forbid", allow_inf_nan=False)
+
+
+class _Answer(BaseModel):
+    model_config = ConfigDict(extra="forbid")
+
+
+def _split(value: Any) -> Any:
+    return [name.strip() for name in value.split(",") if name.strip()] if isinstance(value, str) else value
+
+
+class TargetQuestion(_Question):
+    """A target of the caller's own; ICRS, epoch 2000."""
+
+    ra_deg: float
+    dec_deg: float
+    name: str = ""
+    magnitudes: dict[str, float] = Field(default_factory=dict)
+    diameter_mas: float | None = None
+
+
+class RankingQuestion(_Question):
+    """Parameters of a ranking; an array, or a baseline and a wavelength."""
+
+    target: Annotated[str, Field(description="A star's name, or coordinates.")] | TargetQuestion
+    array: str | None = None
+    stations: Annotated[list[str] | None, BeforeValidator(_split)] = None
+    mode: str | None = None
+    baseline_m: float | None = None
+    wavelength_um: float | None = None
+    separation_max_deg: float | None = None
+    magnitude_max: float | None = None
+    v2_min: float | None = None
+    judge: str = "rms"
+    best: int = 20
+    edition: str | None = None
+
+
+class StarsQuestion(_Question):
+    """By name, or around a place."""
+
+    name: str | None = None
+    ra_deg: float | None = None
+    dec_deg: float | None = None
+    radius_deg: Annotated[float, Field(gt=0, le=180)] = 1.0
+    limit: Annotated[int, Field(ge=1, le=10_000)] = 100
+
+
+class Measured(_Answer):
+    value: float
+    error: float
+
+
+class StarMagnitude(Measured):
+    error_assumed: bool
+    source: str
+
+
+class DiameterAnswer(_Answer):
+    limb_darkened_mas: float
+    uniform_disk_mas: float
+    band: str
+    own_error_mas: float
+    shared_error_mas: float
+    error_mas: float
+    relations: list[str]
+    discordant: bool
+
+
+class VisibilityAnswer(_Answer):
+    v2_min: float
+    v2_max: float
+    longest_baseline_m: float
+
+
+class BudgetAnswer(_Answer):
+    """Per cent of the target's V^2; null where a term cannot be computed."""
+
+    diameter: float | None
+    photon: float | None
+    drift: float | None
+    brightness: float | None
+    companion: float | None
+    shape: float | None
+
+
+class Window(_Answer):
+    start_utc: str
+    end_utc: str
+
+
+class CalibratorAnswer(_Answer):
+    rank: int
+    star_id: int
+    name: str
+    ra_deg: float
+    dec_deg: float
+    separation_deg: float
+    spectral_type: str
+    flags: list[str]
+    magnitudes: dict[str, Measured]
+    diameter: DiameterAnswer
+    visibility: VisibilityAnswer
+    budget_percent: BudgetAnswer
+    calibration_error_percent: float | None
+    standing: Literal["vouched", "unproven", "doubted", "barred"] | None
+    window_utc: list[Window] | None
+
+
+class TargetAnswer(_Answer):
+    name: str
+    ra_deg: float
+    dec_deg: float
+    magnitude: float | None
+    magnitudes: dict[str, float]
+    diameter_mas: float | None
+    star_id: int | None
+
+
+class BaselineAnswer(_Answer):
+    stations: list[str]
+    length_m: float
+
+
+class SetupAnswer(_Answer):
+    array: str | None
+    stations: list[str]
+    baselines: list[BaselineAnswer]
+    mode: str | None
+    band: str
+    wavelength_um: float
+    bandwidth_um: float | None
+    channels: int
+    field_arcsec: float
+    look_interval_min: float | None
+
+
+class ParametersAnswer(_Answer):
+    separation_max_deg: float
+    magnitude_max: float | None
+    v2_min: float
+    judge: str
+    best: int
+
+
+class CountsAnswer(_Answer):
+    """ranked plus all of excluded is stars."""
+
+    stars: int
+    ranked: int
+    listed: int
+
+
+class SetAnswer(_Answer):
+    size: int
+    star_ids: list[int]
+    calibration_error_percent: float | None
+
+
+class RankingAnswer(_Answer):
+    """Calibrators of one target, best first."""
+
+    edition: str
+    pinlight: str
+    target: TargetAnswer
+    setup: SetupAnswer
+    parameters: ParametersAnswer
+    calibrators: list[CalibratorAnswer]
+    counts: CountsAnswer
+    excluded: dict[str, int]
+    best_sets: list[SetAnswer]
+    notes: list[str]
+
+
+class StarBrief(_Answer):
+    star_id: int
+    name: str
+    ra_deg: float
+    dec_deg: float
+    separation_deg: float | None
+    spectral_type: str
+    flags: list[str]
+    magnitudes: dict[str, Measured]
+    limb_darkened_mas: float | None
+    error_mas: float | None
+
+
+class StarsAnswer(_Answer):
+    """Stars of a name or place, nearest first; `count` is how many there are, listed or not."""
+
+    edition: str
+    count: int
+    stars: list[StarBrief]
+
+
+class RelationPart(_Answer):
+    relation: str
+    diameter_mas: float
+    weight: float
+    pull: float | None
+
+
+class StarDiameter(_Answer):
+    limb_darkened_mas: float
+    own_error_mas: float
+    shared_error_mas: float
+    error_mas: float
+    chi_squared: float
+    degrees_of_freedom: int
+    probability: float
+    discordant: bool
+    culprit: str | None
+    av_mag: float
+    av_error_mag: float
+    luminosity_group: str
+    teff_k: float | None
+    logg: float | None
+    relation_set: str
+    relations: list[RelationPart]
+
+
+class Neighbour(_Answer):
+    neighbour_id: int | None
+    name: str | None
+    separation_arcsec: float
+    delta_v_mag: float | None
+    delta_ks_mag: float | None
+
+
+class StandingRecord(_Answer):
+    standing: str
+    reason: str
+    made_by: str
+    made_utc: str
+
+
+class StarAnswer(_Answer):
+    """Everything known of one star."""
+
+    star_id: int
+    name: str
+    identifiers: list[str]
+    ra_deg: float
+    dec_deg: float
+    pm_ra_mas_yr: float | None
+    pm_dec_mas_yr: float | None
+    parallax_mas: float | None
+    radial_velocity_km_s: float | None
+    spectral_type: str
+    flags: list[str]
+    magnitudes: dict[str, StarMagnitude]
+    companions: list[Neighbour]
+    diameter: StarDiameter | None
+    standing: str | None
+    standings: list[StandingRecord]
+    source: str
+
+
+class ArrayAnswer(_Answer):
+    key: str
+    name: str
+    latitude_deg: float
+    longitude_deg: float
+    height_m: float
+    stations: list[str]
+    longest_baseline_m: float
+    modes: list[dict[str, Any]]
+    limits: dict[str, float]
+    drift: dict[str, float]
+
+
+class ArraysAnswer(_Answer):
+    arrays: list[ArrayAnswer]
+
+
+class HealthAnswer(_Answer):
+    status: Literal["ok"]
+    pinlight: str
+    edition: str
+    stars: int
+
+
+class Problem(_Answer):
+    """Problem details, RFC 9457."""
+
+    type: str
+    title: str
+    status: int
+    detail: str

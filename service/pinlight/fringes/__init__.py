@@ -1,0 +1,1 @@
+"""Fringes: visibility, sensitivity, noise, companions."""

@@ -1,0 +1,1 @@
+"""Bands, colour systems and extinction."""

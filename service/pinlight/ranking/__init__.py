@@ -1,0 +1,1 @@
+"""Ranking: what a ranking reads, the gates, the error budget, the result."""

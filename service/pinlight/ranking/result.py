@@ -1,0 +1,171 @@
+"""The one result object behind every face."""
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+from pinlight.ranking.budget import TERMS
+from pinlight.ranking.setup import Setup, Thresholds
+from pinlight.ranking.target import Target
+
+if TYPE_CHECKING:
+    from astropy.table import QTable
+
+__all__ = ["Calibrator", "Ranking"]
+
+
+def _rounded(value: float | None, digits: int) -> float | None:
+    """JSON has no NaN and no infinity; both become null."""
+    return None if value is None or not math.isfinite(value) else round(float(value), digits)
+
+
+@dataclass(frozen=True)
+class Calibrator:
+    """One ranked star. Errors in `budget` and `calibration_error` are relative, not percent."""
+
+    rank: int
+    star_id: int
+    name: str
+    ra_deg: float
+    dec_deg: float
+    separation_deg: float
+    spectral_type: str
+    magnitudes: dict[str, tuple[float, float]]
+    limb_darkened_mas: float
+    uniform_disk_mas: float
+    own_error_mas: float
+    shared_error_mas: float
+    relations: tuple[str, ...]
+    flags: tuple[str, ...]
+    v2_min: float
+    v2_max: float
+    longest_baseline_m: float
+    budget: dict[str, float | None]
+    calibration_error: float
+    standing: str | None
+
+    def to_dict(self, band: str) -> dict[str, Any]:
+        """As it stands in a ranking's JSON."""
+        return {
+            "rank": self.rank,
+            "star_id": self.star_id,
+            "name": self.name,
+            "ra_deg": round(self.ra_deg, 7),
+            "dec_deg": round(self.dec_deg, 7),
+            "separation_deg": round(self.separation_deg, 4),
+            "spectral_type": self.spectral_type,
+            "flags": list(self.flags),
+            "magnitudes": {
+                name: {"value": round(value, 3), "error": round(error, 3)}
+                for name, (value, error) in self.magnitudes.items()
+            },
+            "diameter": {
+                "limb_darkened_mas": round(self.limb_darkened_mas, 5),
+                "uniform_disk_mas": round(self.uniform_disk_mas, 5),
+                "band": band,
+                "own_error_mas": round(self.own_error_mas, 5),
+                "shared_error_mas": round(self.shared_error_mas, 5),
+                "error_mas": round(math.hypot(self.own_error_mas, self.shared_error_mas), 5),
+                "relations": list(self.relations),
+                "discordant": "discordant" in self.flags,
+            },
+            "visibility": {
+                "v2_min": round(self.v2_min, 5),
+                "v2_max": round(self.v2_max, 5),
+                "longest_baseline_m": round(self.longest_baseline_m, 3),
+            },
+            "budget_percent": {
+                name: _rounded(None if (term := self.budget[name]) is None else 100 * term, 4) for name in TERMS
+            },
+            "calibration_error_percent": _rounded(100 * self.calibration_error, 4),
+            "standing": self.standing,
+            "window_utc": None,
+        }
+
+
+@dataclass(frozen=True)
+class Ranking:
+    """The calibrators of one target, best first, and why all other stars are not among them.
+
+    `excluded` counts every star of the edition that failed a gate, by reason; with the
+    `ranked` stars, of which the best are `calibrators`, it adds up to `stars`.
+    """
+
+    edition: str
+    pinlight: str
+    target: Target
+    setup: Setup
+    limits: Thresholds
+    judge: str
+    best: int
+    calibrators: tuple[Calibrator, ...]
+    stars: int
+    ranked: int
+    excluded: dict[str, int]
+    notes: tuple[str, ...]
+
+    def to_dict(self) -> dict[str, Any]:
+        """The JSON of a ranking, as described in the project's interface."""
+        return {
+            "edition": self.edition,
+            "pinlight": self.pinlight,
+            "target": self.target.to_dict(self.setup.band),
+            "setup": self.setup.to_dict(),
+            "parameters": {
+                "separation_max_deg": self.limits.separation_max_deg,
+                "magnitude_max": self.limits.magnitude_max,
+                "v2_min": self.limits.v2_min,
+                "judge": self.judge,
+                "best": self.best,
+            },
+            "calibrators": [star.to_dict(self.setup.band) for star in self.calibrators],
+            "counts": {"stars": self.stars, "ranked": self.ranked, "listed": len(self.calibrators)},
+            "excluded": dict(self.excluded),
+            "best_sets": [
+                {
+                    "size": 1,
+                    "star_ids": [star.star_id],
+                    "calibration_error_percent": _rounded(100 * star.calibration_error, 4),
+                }
+                for star in self.calibrators[:1]
+            ],
+            "notes": list(self.notes),
+        }
+
+    def table(self) -> "QTable":
+        """The calibrators as an astropy table with units."""
+        from astropy import units
+        from astropy.table import QTable
+
+        stars = self.calibrators
+        percent = {
+            f"{name}_error": [math.nan if (term := star.budget[name]) is None else 100 * term for star in stars]
+            * units.percent
+            for name in TERMS
+        }
+        return QTable(
+            {
+                "rank": [star.rank for star in stars],
+                "star_id": [star.star_id for star in stars],
+                "name": [star.name for star in stars],
+                "ra": [star.ra_deg for star in stars] * units.deg,
+                "dec": [star.dec_deg for star in stars] * units.deg,
+                "separation": [star.separation_deg for star in stars] * units.deg,
+                "spectral_type": [star.spectral_type for star in stars],
+                "limb_darkened_diameter": [star.limb_darkened_mas for star in stars] * units.mas,
+                "uniform_disk_diameter": [star.uniform_disk_mas for star in stars] * units.mas,
+                "own_error": [star.own_error_mas for star in stars] * units.mas,
+                "shared_error": [star.shared_error_mas for star in stars] * units.mas,
+                "v2_min": [star.v2_min for star in stars],
+                "v2_max": [star.v2_max for star in stars],
+                **percent,
+                "calibration_error": [100 * star.calibration_error for star in stars] * units.percent,
+            },
+            meta={
+                "edition": self.edition,
+                "pinlight": self.pinlight,
+                "target": self.target.name,
+                "excluded": dict(self.excluded),
+                "notes": list(self.notes),
+            },
+        )

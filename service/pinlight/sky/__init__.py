@@ -1,0 +1,1 @@
+"""Places on the sky: positions, proper motion, separations, sky cells."""
