@@ -20,8 +20,8 @@ _DWARF = np.array(
         (63.0, 3430, 4.55), (64.0, 3210, 5.10), (65.0, 3060, 5.60), (66.0, 2810, 6.20),
     ]
 )  # fmt: skip
-# Giants: the scale of van Belle et al. (1999), AJ 117, 521 (memory, rounded to 50 K); a temperature
-# wrong by 150 K moves theta_UD by less than 0.1 % in K and 0.4 % in V.
+# Giants: after Alonso, Arribas & Martinez-Roger (1999), A&AS 140, 261 (memory, rounded to 50 K). A
+# temperature wrong by 150 K moves theta_UD by about 0.1 % in K and 0.3 % in V; a test measures it.
 _GIANT = np.array(
     [(30.0, 7200), (40.0, 5600), (45.0, 5050), (48.0, 4900), (50.0, 4750), (52.0, 4500),
      (53.0, 4300), (55.0, 3950), (60.0, 3850), (62.0, 3700), (64.0, 3550), (66.0, 3300)]

@@ -12,6 +12,8 @@ from pinlight.version import __version__
 
 __all__ = ["page"]
 
+_ROWS = 15
+
 page = Blueprint("page", __name__)
 
 
@@ -26,10 +28,8 @@ def first_page() -> str:
     ranking, problem = None, None
     if target := asked.get("target"):
         try:
-            question = read_question(
-                RankingQuestion, {"target": target, "array": key, "mode": mode, "best": 15}
-            )
-            ranking = answer_ranking(question)
+            question = {"target": target, "array": key, "mode": mode, "best": _ROWS}
+            ranking = answer_ranking(read_question(RankingQuestion, question))
         except (InputError, NotFoundError) as error:
             problem = str(error)
     return render_template(
