@@ -296,6 +296,7 @@ def check(file: str, as_json: bool) -> None:
     """Check an array FILE and say what it holds."""
     from pinlight.arrays.geometry import baselines
     from pinlight.faces.library import find_array
+    from pinlight.fringes.visibility import resolution_mas
 
     found = find_array(file)
     pairs = baselines(found.station)
@@ -313,9 +314,9 @@ def check(file: str, as_json: bool) -> None:
     for pair in pairs:
         click.echo(f"  {' – '.join(pair.stations):<20}{pair.length_m:8.1f} m")
     for mode in found.mode:
-        resolution_mas = mode.wavelength_um * 1e-6 / pairs[0].length_m * 206_264_806.2
+        resolved_mas = resolution_mas(pairs[0].length_m, mode.wavelength_um)
         band = f"{mode.wavelength_um:g} um, {mode.channels} channels"
-        click.echo(f"  mode {mode.name}: {band}, resolves {resolution_mas:.2f} mas")
+        click.echo(f"  mode {mode.name}: {band}, resolves {resolved_mas:.2f} mas")
 
 
 @main.command()

@@ -34,7 +34,7 @@ def suspected_companion_error() -> float:
     `SUSPECTED_PROBABILITY`.
 
     >>> round(suspected_companion_error(), 4)
-    0.0182
+    0.019
     """
     differences = np.linspace(0.0, _FAINTEST_MAG, 501)
     errors = companion_error(10 ** (-0.4 * differences))

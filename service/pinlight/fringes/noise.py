@@ -56,7 +56,7 @@ def counts_per_frame_at_mag0(
     is that of Vega in the band (Willmer 2018, ApJS 236, 47), flat across the bandwidth.
 
     >>> round(counts_per_frame_at_mag0("Ks", 1.0, 0.3, 0.01, 10.0))
-    22364
+    223641
     """
     the_band = BANDS[band]
     photon_j = _PLANCK_J_S * _LIGHT_M_S / (the_band.wavelength_um * 1e-6)

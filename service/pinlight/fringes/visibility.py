@@ -13,6 +13,7 @@ __all__ = [
     "channel_average",
     "channel_nodes",
     "disk_argument",
+    "resolution_mas",
     "sensitivity",
     "visibility",
     "visibility_and_sensitivity",
@@ -36,6 +37,15 @@ def disk_argument(diameter_mas: ArrayLike, baseline_m: ArrayLike, wavelength_um:
     if np.any(~(wavelength > 0)):
         raise InputError(f"wavelength_um is {np.min(wavelength):g}; it must be positive")
     return np.pi * np.asarray(diameter_mas, float) * MAS * np.asarray(baseline_m, float) / (wavelength * 1e-6)
+
+
+def resolution_mas(baseline_m: float, wavelength_um: float) -> float:
+    """The angle lambda / 2B that a baseline just resolves. [mas]
+
+    >>> round(resolution_mas(100.0, 2.2), 2)
+    2.27
+    """
+    return float(wavelength_um * 1e-6 / (2 * baseline_m) / MAS)
 
 
 def _bessel_parts(x: Floats) -> tuple[Floats, Floats, Floats, Floats]:

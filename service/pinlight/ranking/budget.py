@@ -127,24 +127,25 @@ def error_budget(
             by_sample["brightness"] = everywhere(
                 drift.brightness_per_mag * np.abs(magnitude - target_magnitude)
             )
-    squares = {name: term**2 for name, term in by_sample.items() if term is not None}
+    count, samples = len(rows), v2.shape[1] * v2.shape[2]
+    flat = v2.reshape(count, samples)
+    squares = {name: (term**2).reshape(count, samples) for name, term in by_sample.items() if term is not None}
     total = np.sum(list(squares.values()), axis=0)
-    count = len(rows)
     if judge == "rms":
-        summary = {name: np.sqrt(square.reshape(count, -1).mean(axis=1)) for name, square in squares.items()}
-        summed = np.sqrt(total.reshape(count, -1).mean(axis=1))
+
+        def summarise(square: Floats) -> Floats:
+            return np.sqrt(square.mean(axis=1))
+
     else:
-        worst = total.reshape(count, -1).argmax(axis=1) if count else np.empty(0, dtype=np.int64)
-        stars_range = np.arange(count)
-        summary = {
-            name: np.sqrt(square.reshape(count, -1)[stars_range, worst]) for name, square in squares.items()
-        }
-        summed = np.sqrt(total.reshape(count, -1)[stars_range, worst])
-    flat = v2.reshape(count, -1)
+        worst = total.argmax(axis=1)[:, None]
+
+        def summarise(square: Floats) -> Floats:
+            return np.sqrt(np.take_along_axis(square, worst, axis=1)[:, 0])
+
     return Budget(
-        terms={name: summary.get(name) for name in TERMS},
-        total=summed,
-        v2_min=flat.min(axis=1) if count else np.empty(0),
-        v2_max=flat.max(axis=1) if count else np.empty(0),
+        terms={name: summarise(squares[name]) if name in squares else None for name in TERMS},
+        total=summarise(total),
+        v2_min=flat.min(axis=1),
+        v2_max=flat.max(axis=1),
         limb_darkening=u,
     )

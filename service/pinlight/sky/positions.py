@@ -24,13 +24,16 @@ Floats = NDArray[np.float64]
 # North galactic pole in ICRS: The Hipparcos and Tycho Catalogues, ESA SP-1200 (1997), vol. 1, eq. 1.5.12.
 _GALACTIC_POLE_RA_DEG, _GALACTIC_POLE_DEC_DEG = 192.85948, 27.12825
 
+_AU_PER_YEAR_KM_S = 4.740470463533  # 149 597 870.7 km (IAU 2012 resolution B2) in a Julian year
+
 _NUMBER = r"\d+(?:\.\d*)?"
 _SEXAGESIMAL = re.compile(
     rf"(?P<h>\d{{1,3}})(?:\s*[:h]\s*|\s+)(?P<m>{_NUMBER})(?:(?:\s*[:m]\s*|\s+)(?P<s>{_NUMBER})\s*s?)?\s*m?"
     rf"[\s,]*(?P<sign>[+\-−])?\s*(?P<d>\d{{1,2}})(?:\s*[:d°]\s*|\s+)(?P<am>{_NUMBER})"
     rf"(?:(?:\s*[:m'′]\s*|\s+)(?P<as>{_NUMBER})\s*[s\"″]?)?\s*[m'′]?"
 )
-_DECIMAL = re.compile(r"(?P<ra>[+-]?[\w.]+)\s*d?[\s,]\s*(?P<dec>[+\-−]?[\w.]+)\s*d?")
+_REAL = r"(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?|nan|inf"
+_DECIMAL = re.compile(rf"(?P<ra>[+-]?(?:{_REAL}))\s*d?[\s,]\s*(?P<dec>[+\-−]?(?:{_REAL}))\s*d?")
 
 
 def check_position(ra_deg: float, dec_deg: float) -> tuple[float, float]:
@@ -68,10 +71,7 @@ def _as_degrees(text: str) -> tuple[float, float] | None:
         dec_deg = degrees + arcmin / 60 + arcsec / 3600
         return ra_deg, -dec_deg if match["sign"] in ("-", "−") else dec_deg
     if match := _DECIMAL.fullmatch(text):
-        try:
-            return float(match["ra"]), float(match["dec"].replace("−", "-"))
-        except ValueError:
-            return None
+        return float(match["ra"]), float(match["dec"].replace("−", "-"))
     return None
 
 
@@ -148,21 +148,23 @@ def move_to_epoch(
 
     Notes
     -----
-    ERFA's `pmsafe`, the SOFA space-motion algorithm; a vanishing parallax is replaced there
-    by one too small to matter.
+    The standard model of uniform space motion, The Hipparcos and Tycho Catalogues, ESA SP-1200
+    (1997), vol. 1, sec. 1.5.5: the direction turns as r + t (p mu_ra + q mu_dec + r mu_r).
     """
-    motions = (np.nan_to_num(np.asarray(value, float)) for value in (pm_ra_mas_yr, pm_dec_mas_yr))
-    pm_ra, pm_dec = (np.radians(motion / 3.6e6) for motion in motions)
+    motions = (pm_ra_mas_yr, pm_dec_mas_yr, parallax_mas, radial_velocity_km_s)
+    pm_ra, pm_dec, parallax, velocity = (np.nan_to_num(np.asarray(value, float)) for value in motions)
+    # Radial motion in the same unit: parallax [mas] times velocity over one au a year [km/s].
+    radial = np.radians(parallax * velocity / _AU_PER_YEAR_KM_S / 3.6e6)
+    years = to_year - from_year
     ra, dec = np.radians(ra_deg), np.radians(dec_deg)
-    start, end = ((2451545.0, (year - 2000.0) * 365.25) for year in (from_year, to_year))
-    moved = erfa.pmsafe(
-        ra,
-        dec,
-        pm_ra / np.maximum(np.cos(dec), 1e-12),
-        pm_dec,
-        np.nan_to_num(np.asarray(parallax_mas, float)) / 1000,
-        np.nan_to_num(np.asarray(radial_velocity_km_s, float)),
-        *start,
-        *end,
+    zero = np.zeros_like(ra)
+    r = erfa.s2c(ra, dec)
+    p = np.stack([-np.sin(ra), np.cos(ra), zero], axis=-1)
+    q = np.stack([-np.sin(dec) * np.cos(ra), -np.sin(dec) * np.sin(ra), np.cos(dec)], axis=-1)
+    moved = (
+        r * (1 + years * radial)[..., None]
+        + p * (years * np.radians(pm_ra / 3.6e6))[..., None]
+        + q * (years * np.radians(pm_dec / 3.6e6))[..., None]
     )
-    return np.degrees(moved[0]) % 360, np.degrees(moved[1])
+    new_ra, new_dec = erfa.c2s(moved)
+    return np.degrees(new_ra) % 360, np.degrees(new_dec)
