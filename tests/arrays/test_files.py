@@ -64,9 +64,9 @@ def test_a_wrong_file_is_told_its_key_and_value(tmp_path, old, new, message):
 
 
 def test_an_unreadable_file_is_named(tmp_path):
-    with pytest.raises(InputError, match="cannot read array file .*none.toml: No such file"):
+    with pytest.raises(InputError, match=r"cannot read array file .*none.toml: No such file"):
         load_array(tmp_path / "none.toml")
-    with pytest.raises(InputError, match="cannot read array file .*: Is a directory"):
+    with pytest.raises(InputError, match=r"cannot read array file .*: Is a directory"):
         load_array(tmp_path)
     binary = tmp_path / "picture.toml"
     binary.write_bytes(b"\x89PNG\xff\xfe")

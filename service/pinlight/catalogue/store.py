@@ -8,6 +8,7 @@ from datetime import UTC, datetime
 from functools import cached_property
 from pathlib import Path
 from typing import Any
+from urllib.parse import quote
 
 from sqlalchemy import Engine, create_engine, event, func, insert, inspect, select, text
 from sqlalchemy.engine import URL, make_url
@@ -67,7 +68,12 @@ def _database_errors(path: Path, doing: str) -> Any:
 
 
 def _engine(path: Path) -> Engine:
-    engine = create_engine(f"sqlite:///{path}", connect_args={"timeout": 30})
+    """An engine on a file; on read-only ground one that asks SQLite for no lock or log file."""
+    url = f"sqlite:///{path}"
+    effective = os.access in os.supports_effective_ids
+    if path.exists() and not os.access(path.parent, os.W_OK, effective_ids=effective):
+        url = f"sqlite:///file:{quote(str(path.absolute()))}?immutable=1&uri=true"
+    engine = create_engine(url, connect_args={"timeout": 30})
 
     @event.listens_for(engine, "connect")
     def _settings(connection: Any, _record: Any) -> None:
@@ -353,9 +359,8 @@ class Catalogue:
                 table=Standing, order=Standing.id,
             )  # fmt: skip
             neighbours = [row["neighbour_id"] for row in companions]
-            neighbour_names = dict(
-                connection.execute(select(Star.id, Star.name).where(Star.id.in_(neighbours))).tuples().all()
-            )
+            named = connection.execute(select(Star.id, Star.name).where(Star.id.in_(neighbours)))
+            neighbour_names = {row.id: row.name for row in named}
         identifiers = dict.fromkeys(row["name"] for row in names if not row["short"])
         return {
             "star_id": star["id"],

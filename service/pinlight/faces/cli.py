@@ -1,6 +1,7 @@
 """The command line: read the options, make one call, show the answer."""
 
 import json
+import math
 import sys
 from collections.abc import Callable
 from pathlib import Path
@@ -17,6 +18,7 @@ if TYPE_CHECKING:
 
 __all__ = ["main"]
 
+_SHORT = {"diameter": "diam.", "brightness": "bright.", "companion": "comp."}
 # The flags that a reader of a ranking wants to see beside a star that passed the gates.
 _REMARKS = ("component", "variable", "fast_rotator", "peculiar")
 
@@ -54,7 +56,7 @@ def _print_json(answer: Any) -> None:
 def _console() -> Any:
     from rich.console import Console
 
-    return Console(width=None if sys.stdout.isatty() else 132, highlight=False)
+    return Console(width=None if sys.stdout.isatty() else 140, highlight=False)
 
 
 def _say(step: str) -> None:
@@ -138,21 +140,29 @@ def _show_ranking(ranking: "Ranking", most: int | None = None) -> None:
     with_what = f"{setup.array_name}, {setup.mode.name}" if setup.mode else "one baseline"
     longest = f"baselines to {setup.baselines_m.max():.0f} m, {setup.wavelength_um:g} um"
     console.print(f"\n[bold]{ranking.target.name or 'Target'}[/bold]  {with_what}, {longest}")
+    # Every term has its column where there is room; on a narrow screen only the largest is named.
+    wide = console.width >= 130
     table = Table(box=None, pad_edge=False, header_style="dim")
-    table.add_column("")
-    table.add_column("star", no_wrap=True)
-    for heading in ("sep deg", "type", setup.band, "diameter mas", "V2 min", *TERMS):
-        table.add_column(heading, justify="left" if heading == "type" else "right", no_wrap=True)
-    table.add_column("error %", justify="right", style="bold")
-    table.add_column("remarks", style="dim", no_wrap=True)
+    term_headings = [*(_SHORT.get(name, name) for name in TERMS), "V2 min"] if wide else ["mostly"]
+    headings = ["", "star", "error %", *term_headings, "sep deg", "type", setup.band, "diameter mas"]
+    for heading in headings:
+        left = heading in ("star", "type", "mostly")
+        bold = "bold" if heading == "error %" else ""
+        table.add_column(heading, justify="left" if left else "right", style=bold, no_wrap=True)
+    table.add_column("remarks" if wide else "", style="dim", no_wrap=True, max_width=18 if wide else 1)
     for star in ranking.calibrators[:most]:
-        total_mas = (star.own_error_mas**2 + star.shared_error_mas**2) ** 0.5
-        terms = ["–" if (term := star.budget[name]) is None else f"{100 * term:.2f}" for name in TERMS]
+        total_mas = math.hypot(star.own_error_mas, star.shared_error_mas)
+        terms = {name: term for name, term in star.budget.items() if term is not None}
+        shown = (
+            [f"{100 * terms[name]:.2f}" if name in terms else "–" for name in TERMS] + [f"{star.v2_min:.2f}"]
+            if wide
+            else [max(terms, key=lambda name: terms[name])]
+        )
+        remarks = ", ".join(flag for flag in star.flags if flag in _REMARKS).replace("_", " ")
         table.add_row(
-            str(star.rank), star.name, f"{star.separation_deg:.1f}", star.spectral_type,
-            f"{star.magnitudes[setup.band][0]:.2f}", f"{star.limb_darkened_mas:.3f} ± {total_mas:.3f}",
-            f"{star.v2_min:.2f}", *terms, f"{100 * star.calibration_error:.2f}",
-            ", ".join(flag for flag in star.flags if flag in _REMARKS).replace("_", " "),
+            str(star.rank), star.name, f"{100 * star.calibration_error:.2f}", *shown,
+            f"{star.separation_deg:.1f}", star.spectral_type, f"{star.magnitudes[setup.band][0]:.2f}",
+            f"{star.limb_darkened_mas:.3f} ± {total_mas:.3f}", remarks if wide else "*" if remarks else "",
         )  # fmt: skip
     if ranking.calibrators:
         console.print(table)

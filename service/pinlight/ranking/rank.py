@@ -6,7 +6,7 @@ import numpy as np
 
 from pinlight.diameters.limb_darkening import uniform_disk_ratio
 from pinlight.errors import InputError
-from pinlight.ranking.budget import JUDGES, TERMS, error_budget
+from pinlight.ranking.budget import TERMS, error_budget
 from pinlight.ranking.columns import StarColumns, flag_words
 from pinlight.ranking.gates import close_gates
 from pinlight.ranking.result import Calibrator, Ranking
@@ -56,8 +56,6 @@ def rank(
     InputError
         If `judge` or `best` is impossible.
     """
-    if judge not in JUDGES:
-        raise InputError(f"judge is {judge!r}; it may be {' or '.join(JUDGES)}")
     if not 1 <= best <= 1000:
         raise InputError(f"best is {best}; it must lie between 1 and 1000")
     limits = limits or setup.limits

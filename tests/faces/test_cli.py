@@ -1,0 +1,204 @@
+import json
+import subprocess
+import sys
+
+import click
+import pytest
+from click.testing import CliRunner
+
+import pinlight as pl
+from pinlight.faces.cli import main
+from pinlight.faces.models import RankingAnswer
+from pinlight.resources import seed_folder
+
+
+@pytest.fixture
+def run(seeded_path, monkeypatch):
+    monkeypatch.setenv("PINLIGHT_DB", str(seeded_path))
+
+    def call(*arguments):
+        return CliRunner().invoke(main, [str(argument) for argument in arguments], catch_exceptions=False)
+
+    return call
+
+
+def commands(group=main, path=()):
+    for name, command in group.commands.items():
+        yield (*path, name), command
+        if isinstance(command, click.Group):
+            yield from commands(command, (*path, name))
+
+
+@pytest.mark.parametrize(("path", "command"), list(commands()), ids=lambda value: str(value))
+def test_every_command_and_every_option_has_help(path, command):
+    assert command.help, path
+    answer = CliRunner().invoke(main, [*path, "--help"])
+    assert answer.exit_code == 0
+    assert answer.output.startswith("Usage:")
+
+
+def test_the_command_prints_what_the_library_returns(run, catalogue):
+    answer = run(
+        "rank", "tau Cet", "--array", "north", "--mode", "H", "--stations", "Ash,Rowan,Cedar", "--json"
+    )
+    ranking = pl.rank(catalogue, "tau Cet", array="north", mode="H", stations=["Ash", "Rowan", "Cedar"])
+    assert json.loads(answer.stdout) == json.loads(json.dumps(ranking.to_dict()))
+    RankingAnswer.model_validate(json.loads(answer.stdout))
+
+
+def test_a_ranking_reads_well(run):
+    answer = run("rank", "10:06:28 +18:16:26", "--array", "north", "--mode", "K", "--best", "5")
+    assert answer.exit_code == 0
+    lines = answer.stdout.splitlines()
+    assert "Quillstone, K, baselines to 228 m, 2.17 um" in answer.stdout
+    assert sum(line.startswith(tuple("12345")) and "±" in line for line in lines) == 5
+    assert "error %" in answer.stdout
+    assert "farther from the target than the limit" in answer.stdout
+    assert max(len(line) for line in lines) <= 140
+    assert "…" not in answer.stdout.split("stars rank")[0]
+
+
+def test_the_quick_answer(run):
+    answer = json.loads(run("rank", "tau Cet", "--baseline-m", 330, "--wavelength-um", 0.7, "--json").stdout)
+    assert answer["setup"]["array"] is None
+    assert answer["calibrators"][0]["budget_percent"]["photon"] is None
+    assert answer["notes"][0].startswith("No array given")
+
+
+def test_a_file_of_targets(run):
+    answer = run(
+        "rank", seed_folder() / "targets.csv", "--array", "south", "--mode", "H", "--json", "--best", 5
+    )
+    rankings = json.loads(answer.stdout)["rankings"]
+    assert [r["target"]["name"] for r in rankings][:2] == ["Copper Wren", "Slow Ember"]
+
+
+def test_an_empty_result_is_an_answer_not_an_error(run):
+    answer = run("rank", "tau Cet", "--baseline-m", 330, "--wavelength-um", 0.7, "--separation-max-deg", 0.001)
+    assert answer.exit_code == 0
+    assert "No star passes every gate." in answer.stdout
+
+
+def test_a_star_explains_itself(run):
+    answer = run("star", "τ Cet")
+    assert "HD 10700" in answer.stdout
+    assert "limb-darkened diameter" in answer.stdout
+    assert "K04_VK" in answer.stdout
+    facts = json.loads(run("star", "τ Cet", "--json").stdout)
+    assert facts["diameter"]["relations"][0]["relation"] == "K04_BV"
+    assert run("star", "alpha PsA").exit_code == 0  # no infrared magnitudes
+
+
+def test_a_diameter_from_the_command_line(run):
+    answer = run(
+        "diameter", "--V", 5.134, "--Ks", 2.654, "--Ks-error", 0.01, "--spectral-type", "K1III", "--json"
+    )
+    assert json.loads(answer.stdout)["diameter"]["relations"] == ["A18_giant_VK", "P19_VK"]
+    shown = run("diameter", "--V", 5.134, "--Ks", 2.654, "--spectral-type", "K1III", "--band", "H")
+    assert "uniform-disc diameter in H" in shown.stdout
+
+
+def test_an_array_is_checked(run, tmp_path):
+    answer = run("array", "check", seed_folder() / "arrays" / "north.toml")
+    assert "Quillstone: 6 stations, 15 baselines, all keys in order" in answer.stdout
+    assert json.loads(run("array", "check", "south", "--json").stdout)["stations"][0] == "Heron"
+    (tmp_path / "bad.toml").write_text("name = 3", encoding="utf-8")
+    bad = run("array", "check", tmp_path / "bad.toml")
+    assert bad.exit_code == 2
+    assert bad.stderr.startswith("pinlight: array file")
+    assert bad.stderr.count("\n") == 1
+
+
+def test_init_says_what_there_is(run, tmp_path):
+    answer = run("init")
+    assert "74733 stars, edition" in answer.stdout
+    empty = run("init", "--empty", "--db", tmp_path / "e.db")
+    assert "no stars yet" in empty.stdout
+
+
+def test_the_demo_ranks_every_target_and_ends(run):
+    answer = run("demo", "--once", "--json")
+    demo = json.loads(answer.stdout)
+    assert len(demo["rankings"]) >= 8
+    for ranking in demo["rankings"]:
+        RankingAnswer.model_validate(ranking)
+        assert len(ranking["calibrators"]) >= 5
+        assert ranking["edition"] == demo["edition"]
+    assert {ranking["setup"]["array"] for ranking in demo["rankings"]} == {"Quillstone", "Ember Pan"}
+    shown = run("demo", "--once")
+    assert shown.stdout.count("error %") == len(demo["rankings"])
+
+
+QUICK = ("--baseline-m", 100, "--wavelength-um", 1.65)
+
+
+@pytest.mark.parametrize(
+    ("arguments", "message"),
+    [
+        (("rank", "tau Ceet", *QUICK), "no star is named 'tau Ceet'; did you mean tau Cet"),
+        (("rank", "mu Sco", *QUICK), "name 'mu Sco' may be any of mu1 Sco, mu2 Sco; give one of them"),
+        (("rank", "10 95", *QUICK), "dec_deg is 95; it must lie between -90 and 90"),
+        (("rank", "nan 20", *QUICK), "ra_deg is nan; it must lie between 0 and 360"),
+        (
+            ("rank", "tau Cet", "--baseline-m", 0, "--wavelength-um", 1.65),
+            "baseline_m is 0; it must lie above 0",
+        ),
+        (("rank", "tau Cet", "--baseline-m", 100, "--wavelength-um", 2200), "(2200 nm is 2.2 um)"),
+        (("rank", "tau Cet", *QUICK, "--judge", "mean"), "judge is 'mean'; it may be rms or worst"),
+        (("rank", "tau Cet", *QUICK, "--best", 0), "best is 0; it must lie between 1 and 1000"),
+        (("rank", "tau Cet", *QUICK, "--edition", "abc"), "edition is 'abc'; the catalogue has"),
+        (("rank", "tau Cet", "--array", "none.toml"), "cannot read array file none.toml: No such file"),
+        (("rank", "none.csv", *QUICK), "cannot read targets file none.csv: No such file"),
+        (("star", "HD 99999999"), "no star is named 'HD 99999999'"),
+        (("diameter", "--V", 5), "1 magnitude is given; a colour takes at least two bands"),
+        (("diameter", "--V", 5, "--Ks", 3, "--ra-deg", 5), "dec_deg is missing; give both or neither"),
+        (("serve", "--host", "0.0.0.0"), "host is 0.0.0.0, which others can reach; add --open"),
+        (("serve", "--arrays", "no-such-folder"), "arrays is no-such-folder, a folder without .toml files"),
+    ],
+)
+def test_bad_input_gets_one_line_and_exit_code_2(run, arguments, message):
+    answer = run(*arguments)
+    assert answer.exit_code == 2, answer.output
+    assert message in answer.stderr
+    assert answer.stderr.startswith("pinlight: ")
+    assert answer.stderr.count("\n") == 1
+    assert answer.stdout == ""
+
+
+def test_a_missing_catalogue_is_exit_code_1(run, tmp_path):
+    answer = run("rank", "tau Cet", *QUICK, "--db", tmp_path / "none.db")
+    assert answer.exit_code == 1
+    assert "run 'pinlight init' to make one" in answer.stderr
+
+
+def test_help_imports_nothing_heavy():
+    code = (
+        "import sys; from pinlight.faces.cli import main\n"
+        "try: main(['--help'])\nexcept SystemExit: pass\n"
+        "heavy = {'numpy', 'scipy', 'astropy', 'sqlalchemy', 'flask', 'rich'}\n"
+        "print(sorted({m.split('.')[0] for m in sys.modules} & heavy))"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", code], capture_output=True, text=True, check=True, env=_environment()
+    )
+    assert done.stdout.strip().endswith("[]")
+
+
+def test_a_ranking_imports_no_astropy_and_no_alembic(seeded_path):
+    code = (
+        "import sys; from pinlight.faces.cli import main\n"
+        f"try: main(['rank', 'tau Cet', '--array', 'north', '--mode', 'H', '--db', {str(seeded_path)!r}])\n"
+        "except SystemExit as end: print('code', end.code)\n"
+        "print(sorted({m.split('.')[0] for m in sys.modules} & {'astropy','alembic','flask'}))"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", code], capture_output=True, text=True, check=True, env=_environment()
+    )
+    assert done.stdout.strip().endswith("code 0\n[]")
+
+
+def _environment():
+    import os
+    from pathlib import Path
+
+    return os.environ | {"PYTHONPATH": str(Path(__file__).parents[2] / "service")}
