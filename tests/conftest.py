@@ -9,6 +9,12 @@ from pinlight.catalogue.store import Catalogue, make_catalogue
 from pinlight.faces.library import known_arrays
 
 
+def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
+    """Fast tests first: those that make catalogues or start processes come last."""
+    slow = ("tests/faces", "tests/catalogue")
+    items.sort(key=lambda item: next((1 + i for i, part in enumerate(slow) if part in item.nodeid), 0))
+
+
 @pytest.fixture(autouse=True)
 def _own_environment(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
     """No test reads or writes the catalogue of whoever runs it."""

@@ -53,7 +53,7 @@ def test_a_ranking_reads_well(run):
     assert "Quillstone, K, baselines to 228 m, 2.17 um" in answer.stdout
     assert sum(line.startswith(tuple("12345")) and "±" in line for line in lines) == 5
     assert "error %" in answer.stdout
-    assert "farther from the target than the limit" in answer.stdout
+    assert " too far, " in answer.stdout
     assert max(len(line) for line in lines) <= 140
     assert "…" not in answer.stdout.split("stars rank")[0]
 

@@ -9,7 +9,7 @@ from pydantic import AfterValidator, BaseModel, ConfigDict, Field, ValidationErr
 from pinlight.errors import InputError
 from pinlight.photometry.bands import band
 
-__all__ = ["Array", "Drift", "Limits", "Mode", "Station", "load_array"]
+__all__ = ["Array", "Drift", "Limits", "Mode", "Station", "describe", "load_array"]
 
 
 def _known_band(name: str) -> str:

@@ -134,7 +134,6 @@ def _show_ranking(ranking: "Ranking", most: int | None = None) -> None:
     from rich.table import Table
 
     from pinlight.ranking.budget import TERMS
-    from pinlight.ranking.gates import REASONS
 
     console, setup = _console(), ranking.setup
     with_what = f"{setup.array_name}, {setup.mode.name}" if setup.mode else "one baseline"
@@ -168,8 +167,8 @@ def _show_ranking(ranking: "Ranking", most: int | None = None) -> None:
         console.print(table)
     else:
         console.print("No star passes every gate.")
-    reasons = ", ".join(f"{count} {REASONS[reason]}" for reason, count in ranking.excluded.items())
-    console.print(f"[dim]{ranking.ranked} stars rank. Left out: {reasons}.[/dim]")
+    counts = [f"{count} {reason.replace('_', ' ')}" for reason, count in ranking.excluded.items()]
+    console.print(f"[dim]{ranking.ranked} stars rank. Left out: {', '.join(counts) or 'none'}.[/dim]")
     for note in ranking.notes:
         console.print(f"[dim]{note}[/dim]")
 

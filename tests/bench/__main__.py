@@ -1,0 +1,123 @@
+"""Speed of the main jobs beside their peers; medians, in one run. `python -m tests.bench`"""
+
+import os
+import statistics
+import subprocess
+import sys
+import tempfile
+import time
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from pinlight.catalogue.seed import read_seed
+from pinlight.catalogue.store import make_catalogue
+from pinlight.diameters.prediction import StarPhotometry, predict_diameters
+from pinlight.diameters.relations import load_relations
+from pinlight.faces.library import known_arrays
+from pinlight.photometry.bands import default_errors
+from pinlight.photometry.systems import CATALOGUE_BANDS
+from pinlight.ranking.rank import rank
+from pinlight.ranking.setup import setup_of
+from pinlight.ranking.target import Target
+from pinlight.sky.positions import galactic_latitude_deg
+
+
+def median_s(call: Callable[[], Any], repeats: int = 7) -> float:
+    times = []
+    for _ in range(repeats):
+        start = time.perf_counter()
+        call()
+        times.append(time.perf_counter() - start)
+    return statistics.median(times)
+
+
+def command_s(*arguments: str, repeats: int = 5, **environment: str) -> float:
+    program = [sys.executable, "-c", "from pinlight.faces.cli import main; main()", *arguments]
+    settings = os.environ | environment
+
+    def call() -> None:
+        subprocess.run(program, check=True, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, env=settings)
+
+    return median_s(call, repeats)
+
+
+def show(what: str, seconds: float, peer: str = "", peer_s: float = 0.0) -> None:
+    beside = f"   {peer}: {1000 * peer_s:9.1f} ms, ratio {peer_s / seconds:6.1f}" if peer else ""
+    print(f"{what:<44}{1000 * seconds:9.1f} ms{beside}", flush=True)
+
+
+def main() -> None:
+    folder = Path(tempfile.mkdtemp())
+    path = str(folder / "bench.db")
+    show("make the catalogue of the seed (once)", median_s(lambda: make_catalogue(path), 1))
+    catalogue = make_catalogue(path)
+    columns = catalogue.columns()
+    setup = setup_of(known_arrays()["north"], None, "H")
+    target = Target(151.6, 18.3, magnitudes={"H": 2.3})
+
+    from astropy import units
+    from astropy.coordinates import SkyCoord
+
+    places = SkyCoord(np.array(columns.ra_deg), np.array(columns.dec_deg), unit="deg")
+    centre = SkyCoord(target.ra_deg, target.dec_deg, unit="deg")
+
+    def by_astropy() -> Any:
+        return np.flatnonzero(places.separation(centre) < 15 * units.deg)
+
+    show(
+        "stars of a 15 deg field",
+        median_s(lambda: columns.cone(target.ra_deg, target.dec_deg, 15.0), 50),
+        "astropy separations",
+        median_s(by_astropy),
+    )
+    show("rank one target, 15 baselines, 5 channels", median_s(lambda: rank(columns, target, setup), 20))
+
+    seed = read_seed()
+    count = len(seed.names)
+    errors = np.stack(
+        [default_errors(band, seed.magnitudes[:, i]) for i, band in enumerate(CATALOGUE_BANDS)], axis=1
+    )
+    latitude = galactic_latitude_deg(seed.ra_deg, seed.dec_deg)
+
+    def photometry(rows: slice) -> StarPhotometry:
+        return StarPhotometry(
+            seed.magnitudes[rows],
+            errors[rows],
+            seed.spectral_types[rows],
+            seed.parallax_mas[rows],
+            latitude[rows],
+        )
+
+    relations = load_relations()
+    sample = 300
+
+    def one_by_one() -> None:
+        for row in range(sample):
+            predict_diameters(photometry(slice(row, row + 1)), relations)
+
+    show(
+        f"diameters of {count} stars",
+        median_s(lambda: predict_diameters(photometry(slice(None)), relations), 3),
+        "star by star",
+        median_s(one_by_one, 1) * count / sample,
+    )
+    show("pinlight --help (process)", command_s("--help"))
+    show(
+        "pinlight rank (process)",
+        command_s("rank", "tau Cet", "--array", "north", "--mode", "H", PINLIGHT_DB=path),
+    )
+    show(
+        "pinlight demo --once --json, first (process)",
+        command_s("demo", "--once", "--json", repeats=1, PINLIGHT_DB=str(folder / "demo.db")),
+    )
+    show(
+        "pinlight demo --once --json, again (process)",
+        command_s("demo", "--once", "--json", PINLIGHT_DB=str(folder / "demo.db")),
+    )
+
+
+if __name__ == "__main__":
+    main()
