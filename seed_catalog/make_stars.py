@@ -125,7 +125,7 @@ def hipparcos_numbers(stars: dict[str, np.ndarray], path: Path) -> dict[int, int
 
 
 def other_names(entry: dict[str, str]) -> list[str]:
-    """Bayer, Flamsteed, variable, HD and Gliese designations, as the trade writes them."""
+    """Bayer, Flamsteed, variable, HD, Gliese and proper names, as the trade writes them."""
     constellation = entry.get("c", "")
     names = []
     if entry.get("bayer") and constellation:
@@ -135,8 +135,9 @@ def other_names(entry: dict[str, str]) -> list[str]:
         names.append(f"{entry['flam']} {constellation}")
     if entry.get("var") and constellation:
         names.append(f"{re.sub('^V0+', 'V', entry['var'])} {constellation}")
-    names += [entry[key] for key in ("hd", "gl") if entry.get(key)]
-    return [re.sub(r"\s+", " ", name.replace("\u2009", " ")).strip() for name in names]
+    names += [entry[key] for key in ("hd", "gl", "name") if entry.get(key)]
+    plain = [re.sub(r"\s+", " ", name.replace("\u2009", " ")).strip() for name in names]
+    return [name.replace("’", "'") for name in plain if name.replace("’", "'").isascii()]
 
 
 def all_identifiers(
@@ -199,7 +200,8 @@ def main() -> None:
     stars = choose(read_stars(arguments.stars_mat))
     numbers = hipparcos_numbers(stars, arguments.hipparcos)
     shown, joined = all_identifiers(stars, numbers, arguments.names)
-    stars = {"name": np.array(shown), "identifiers": np.array(joined)} | {
+    own = np.array([plain_name(name) for name in stars["name"]])
+    stars = {"name": np.array(shown), "source_name": own, "identifiers": np.array(joined)} | {
         name: column for name, column in stars.items() if name != "name"
     }
     order = np.lexsort([stars["dec_deg"], stars["ra_deg"]])

@@ -38,7 +38,8 @@ def imports_of(path: Path) -> set[str]:
             found |= {alias.name for alias in node.names}
         elif isinstance(node, ast.ImportFrom):
             assert node.level == 0, f"{path} imports relatively"
-            found.add(node.module or "")
+            module = node.module or ""
+            found |= {f"{module}.{alias.name}" for alias in node.names} if module == "pinlight" else {module}
     return found
 
 
@@ -73,4 +74,6 @@ def test_the_check_would_notice_a_wrong_arrow(tmp_path):
     wrong = tmp_path / "wrong.py"
     wrong.write_text("from pinlight.faces.library import rank\n", encoding="utf-8")
     assert imports_of(wrong) == {"pinlight.faces.library"}
+    wrong.write_text("from pinlight import faces\n", encoding="utf-8")
+    assert imports_of(wrong) == {"pinlight.faces"}
     assert not row_of("faces") < row_of("sky")

@@ -9,7 +9,8 @@ if TYPE_CHECKING:
     from pinlight.arrays.files import Array, load_array
     from pinlight.catalogue.store import Catalogue, make_catalogue, open_catalogue
     from pinlight.errors import CatalogueError, InputError, NotFoundError, PinlightError
-    from pinlight.faces.library import rank
+    from pinlight.faces.library import best_set, plan_night, rank, read_requests
+    from pinlight.planning.night import NightPlan, Request
     from pinlight.ranking.result import Ranking
     from pinlight.ranking.target import Target
 
@@ -18,15 +19,20 @@ __all__ = [
     "Catalogue",
     "CatalogueError",
     "InputError",
+    "NightPlan",
     "NotFoundError",
     "PinlightError",
     "Ranking",
+    "Request",
     "Target",
     "__version__",
+    "best_set",
     "load_array",
     "make_catalogue",
     "open_catalogue",
+    "plan_night",
     "rank",
+    "read_requests",
 ]
 
 # Public name -> module, imported when first asked for: the command line starts in a blink.
@@ -35,14 +41,19 @@ _HOMES = {
     "Catalogue": "pinlight.catalogue.store",
     "CatalogueError": "pinlight.errors",
     "InputError": "pinlight.errors",
+    "NightPlan": "pinlight.planning.night",
     "NotFoundError": "pinlight.errors",
     "PinlightError": "pinlight.errors",
     "Ranking": "pinlight.ranking.result",
+    "Request": "pinlight.planning.night",
     "Target": "pinlight.ranking.target",
+    "best_set": "pinlight.faces.library",
     "load_array": "pinlight.arrays.files",
     "make_catalogue": "pinlight.catalogue.store",
     "open_catalogue": "pinlight.catalogue.store",
+    "plan_night": "pinlight.faces.library",
     "rank": "pinlight.faces.library",
+    "read_requests": "pinlight.faces.library",
 }
 
 

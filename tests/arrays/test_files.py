@@ -34,16 +34,20 @@ def test_the_shipped_arrays_lie_in_both_hemispheres(north, south):
         ),
         ("latitude_deg = 38.4", "latitude_deg = nan", "latitude_deg is nan: input should be a finite number"),
         ("latitude_deg = 38.4\n", "", "latitude_deg is missing"),
-        ("height_m", "altitude_m", r"height_m is missing \(and 1 more\)"),
+        ("height_m", "altitude_m", r"height_m is missing; altitude_m is not a known key"),
         ("spread = 0.03", "spread = -0.1", r"drift.spread is -0.1: input should be greater than or equal to 0"),
         (
             "wavelength_um = 1.65",
             "wavelength_um = 1650",
-            r"mode\[0\].wavelength_um is 1650: input should be less",
+            r"mode\[0\].wavelength_um is 1650: input should be less than or equal to 30 \(1650 nm is 1.65 um\)",
         ),
-        ('band = "H"', 'band = "X"', r"mode\[0\].band: band is 'X'; it may be one of B, V"),
-        ("east_m = 11.8", 'east_m = "far"', r"station\[0\].east_m is 'far': input should be a valid number"),
-        ("cart_m = 60.0", "cart_length_m = 60.0", r"station\[0\].cart_m is missing \(and 1 more\)"),
+        ('band = "H"', 'band = "X"', r"mode\[0\].band is 'X': it may be one of B, V"),
+        ("east_m = 11.8", 'east_m = "far"', r"station\[0\].east_m is 'far': it must be a number"),
+        (
+            "cart_m = 60.0",
+            "cart_length_m = 60.0",
+            r"station\[0\].cart_m is missing; station\[0\].cart_length_m is not a known key",
+        ),
         (
             "coarse_paths_m = [0.0, 30.0, 60.0, 90.0]",
             "coarse_paths_m = []",
@@ -54,7 +58,10 @@ def test_the_shipped_arrays_lie_in_both_hemispheres(north, south):
         ("bandwidth_um = 0.28", "bandwidth_um = 4.0", "bandwidth_um must be below twice wavelength_um"),
         ("channels = 5", "channels = 2.5", r"mode\[0\].channels is 2.5: input should be a valid integer"),
         ("[drift]", "[drift", "is not TOML"),
-        ("[limits]", "[limitations]", r"limits is missing \(and 1 more\)"),
+        ("up_m = 1.5", "up_m = true", r"station\[0\].up_m is True: it must be a number"),
+        ('name = "Birch"', 'name = "Bi,rch"', r"station\[1\].name is 'Bi,rch': a name must be printable"),
+        ("read_variance = 4.0", "read_variance = 1e300", r"read_variance is 1e\+300: input should be less"),
+        ("[limits]", "[limitations]", r"limits is missing; limitations is not a known key"),
     ],
 )
 def test_a_wrong_file_is_told_its_key_and_value(tmp_path, old, new, message):

@@ -19,6 +19,8 @@ from pinlight.diameters.relations import load_relations
 from pinlight.faces.library import known_arrays
 from pinlight.photometry.bands import default_errors
 from pinlight.photometry.systems import CATALOGUE_BANDS
+from pinlight.planning.night import Request, plan_night
+from pinlight.ranking.clock import night_clock
 from pinlight.ranking.rank import rank
 from pinlight.ranking.setup import setup_of
 from pinlight.ranking.target import Target
@@ -59,13 +61,15 @@ def main() -> None:
     target = Target(151.6, 18.3, magnitudes={"H": 2.3})
 
     from astropy import units
-    from astropy.coordinates import SkyCoord
+    from astropy.coordinates import AltAz, EarthLocation, SkyCoord
+    from astropy.time import Time
+    from astropy.utils import iers
 
-    places = SkyCoord(np.array(columns.ra_deg), np.array(columns.dec_deg), unit="deg")
+    sky = SkyCoord(np.array(columns.ra_deg), np.array(columns.dec_deg), unit="deg")
     centre = SkyCoord(target.ra_deg, target.dec_deg, unit="deg")
 
     def by_astropy() -> Any:
-        return np.flatnonzero(places.separation(centre) < 15 * units.deg)
+        return np.flatnonzero(sky.separation(centre) < 15 * units.deg)
 
     show(
         "stars of a 15 deg field",
@@ -74,6 +78,42 @@ def main() -> None:
         median_s(by_astropy),
     )
     show("rank one target, 15 baselines, 5 channels", median_s(lambda: rank(columns, target, setup), 20))
+
+    array = known_arrays()["north"]
+    clock = night_clock(array, array.station, "2026-12-01", 10.0)
+    rows, _ = columns.cone(target.ra_deg, target.dec_deg, 15.0)
+    field = SkyCoord(np.array(columns.ra_deg[rows]), np.array(columns.dec_deg[rows]), unit="deg")
+    iers.conf.auto_download, iers.conf.auto_max_age = False, None
+    site = EarthLocation(
+        array.longitude_deg * units.deg, array.latitude_deg * units.deg, array.height_m * units.m
+    )
+    frame = AltAz(obstime=Time(clock.times, format="mjd", scale="tai"), location=site, pressure=0 * units.hPa)
+
+    def places() -> Any:
+        ra, dec = clock.apparent(columns.ra_deg[rows], columns.dec_deg[rows])
+        return clock.above(ra[:, None], dec[:, None], clock.times)
+
+    show(
+        f"altitudes of {len(rows)} stars at {len(clock.times)} times",
+        median_s(places),
+        "astropy AltAz",
+        median_s(lambda: field[:, None].transform_to(frame).alt.deg > 30, 3),
+    )
+
+    def with_clock() -> Any:
+        return rank(columns, target, setup, clock=night_clock(array, array.station, "2026-12-01", 10.0))
+
+    show("rank one target for a night, clock included", median_s(with_clock, 20))
+    random = np.random.default_rng(3)
+    wanted = [
+        Request(Target(float(ra % 360), float(dec), name=f"T{i}", magnitudes={"H": 4.0}), float(1 + i % 3))
+        for i, (ra, dec) in enumerate(zip(random.uniform(330, 510, 30), random.uniform(5, 70, 30), strict=True))
+    ]
+    limit_s = 5.0
+    show(
+        f"plan a night of 30 targets, solver limit {limit_s:g} s",
+        median_s(lambda: plan_night(columns, wanted, setup, clock, time_limit_s=limit_s), 3),
+    )
 
     seed = read_seed()
     count = len(seed.names)

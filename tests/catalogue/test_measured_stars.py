@@ -36,14 +36,15 @@ def stars(catalogue):
 def test_saturated_stars_are_honest_in_the_sense_that_the_readme_states(stars):
     saturated = stars[~(stars[:, 0] >= 4.5)]
     match = re.search(
-        r"Of (\d+) measured stars there, (\d+) lie within two sigma, "
+        r"Of (\d+) measured stars there, (\d+) lie within one sigma and (\d+) within two, "
         r"but their predictions come out (\d+) % too small",
         README,
     )
     assert match
     assert len(saturated) == int(match[1])
-    assert (np.abs(saturated[:, 2]) < 2).sum() == int(match[2])
-    assert round(100 * (1 - np.median(saturated[:, 1]))) == int(match[3])
+    assert (np.abs(saturated[:, 2]) < 1).sum() == int(match[2])
+    assert (np.abs(saturated[:, 2]) < 2).sum() == int(match[3])
+    assert round(100 * (1 - np.median(saturated[:, 1]))) == int(match[4])
     assert (np.abs(saturated[:, 2]) < 2).mean() > 0.9
 
 

@@ -5,7 +5,7 @@ import numpy as np
 import pytest
 from astropy.table import Table
 
-from pinlight.catalogue.seed import OBJECT_TYPES, read_seed
+from pinlight.catalogue.seed import OBJECT_TYPES, _flags, read_seed
 from pinlight.errors import SeedFileError
 from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.ranking.columns import FLAGS
@@ -87,6 +87,24 @@ def test_the_numbers_of_binaries_and_variables_are_the_sources(seed):
         ("V*", "variables (`V*`)"),
     ):
         assert kinds[kind] == count_of(words)
+
+
+@pytest.mark.parametrize(
+    ("kind", "spectral_type", "names", "words"),
+    [
+        ("*", "B6Vep", ["HD 1"], "emission_line peculiar"),
+        ("Be*", "B2V", ["HD 1"], "emission_line be_star fast_rotator"),
+        ("*", "A1Vn", ["HD 1"], "fast_rotator"),
+        ("*", "G8III+G0III", ["HD 1"], "composite_spectrum"),
+        ("*", "G4III", ["V446 And", "HD 1"], "variable"),
+        ("*", "G4III", ["R Lyr"], "variable"),
+        ("*", "G4III", ["A Cen"], ""),
+        ("WD*", "DA3", ["GJ 1"], "white_dwarf"),
+        ("RS*", "K1IV", ["HD 1"], "active_binary variable"),
+    ],
+)
+def test_types_and_names_become_flags(kind, spectral_type, names, words):
+    assert _flags(kind, spectral_type, names) == words
 
 
 def test_a_seed_with_a_wrong_row_is_refused_and_named(tmp_path):

@@ -75,6 +75,10 @@ def test_published_pairs_of_diameters(teff, logg, um, ratio):
 
 def test_wavelengths_between_and_beyond_the_bands():
     u = coefficients(np.array([5000.0]), np.array([3.0]))
+    # Effective wavelengths of the bands: Bessell (1990), PASP 102, 1181; Bessell & Brett (1988), PASP 100, 1134.
+    published = {"U": 0.366, "B": 0.438, "V": 0.545, "R": 0.641, "I": 0.798, "J": 1.22, "H": 1.63, "K": 2.19}
+    for index, name in enumerate(LIMB_DARKENING_BANDS):
+        assert coefficients_at(published[name], u)[0] == pytest.approx(u[0, index], abs=1e-12)
     assert coefficients_at(2.19, u)[0] == u[0, -1]
     assert coefficients_at(10.0, u)[0] == u[0, -1]
     assert u[0, 5] > coefficients_at(1.4, u)[0] > u[0, 6]

@@ -35,7 +35,10 @@ def test_the_critical_figure_has_two_thirds_of_its_equator():
 
 
 def test_bounds_grow_with_rotation_and_vanish_for_cool_stars():
-    bound = oblateness_bound([22.0, 22.0, 45.0, 22.0], [True, True, True, False], [False, True, False, False])
-    assert bound[1] > 3 * bound[0] > 0
-    assert bound[2] == bound[3] == 0
-    assert oblateness_bound([np.nan], [True], [False])[0] == 0
+    bound = oblateness_bound([22.0, 22.0, 34.9, 35.1, 45.0], [False, True, False, False, False])
+    # v^2 R / (2 G M) by hand for R/M = 1 in solar units: 150 km/s 0.0590, 280 km/s 0.2055.
+    assert bound[0] == pytest.approx(0.0590 / 1.0590, abs=2e-4)
+    assert bound[1] == pytest.approx(0.2055 / 1.2055, abs=2e-4)
+    assert bound[2] == bound[0]
+    assert bound[3] == bound[4] == 0
+    assert oblateness_bound([np.nan], [False])[0] == 0

@@ -27,8 +27,6 @@ from pinlight.errors import InputError
 )
 def test_types_are_read_as_catalogues_write_them(text, code, luminosity):
     spectral = parse_spectral_type(text)
-    if text == "K2+Vk:":  # a plus that grades the subclass; the class after it is not read yet
-        luminosity = ""
     assert (spectral.code, spectral.luminosity) == (code, luminosity)
     assert spectral.normal
 
@@ -55,6 +53,13 @@ def test_peculiarities_are_seen():
     assert parse_spectral_type("G8III+G0III").composite
     assert not parse_spectral_type("K4+Vk:").composite
     assert parse_spectral_type("DA4").degenerate
+    assert parse_spectral_type("O5V+WN6").composite
+    assert parse_spectral_type("B4Ieq-K2Ib").composite
+    assert not parse_spectral_type("K1III-IV").composite
+    # Mercury-manganese stars rotate slowly; the n of Mn is no mark of broad lines.
+    assert not parse_spectral_type("B9IIIHgMn").broad_lined
+    assert not parse_spectral_type("B8IIImnp").broad_lined
+    assert not parse_spectral_type("F5Vmetalweak").emission
 
 
 def test_a_missing_class_is_told_from_parallax_and_colour():
@@ -66,11 +71,19 @@ def test_a_missing_class_is_told_from_parallax_and_colour():
     assert list(luminosity_groups(types, v_ks, ks + v_ks, parallax)) == ["giant", "dwarf"]
 
 
+def test_the_limits_between_dwarf_and_giant():
+    # Either side of absolute Ks 1.3 for a red star, of -1 for a blue one (common practice, no source).
+    types = [parse_spectral_type(text) for text in ("K0", "K0", "A0", "A0")]
+    v_ks, absolute = np.array([2.2, 2.2, 0.1, 0.1]), np.array([1.0, 1.6, -1.3, -0.7])
+    groups = luminosity_groups(types, v_ks, absolute + v_ks + 5, np.full(4, 10.0))
+    assert list(groups) == ["giant", "dwarf", "giant", "dwarf"]
+
+
 def test_a_stated_class_is_believed():
     types = [parse_spectral_type(text) for text in ("K0III", "K0V", "F5Iab", "DA3", "G8IV", "K1II")]
     nothing = np.full(6, np.nan)
     assert list(luminosity_groups(types, nothing, nothing, nothing)) == [
-        "giant", "dwarf", "supergiant", "", "dwarf", "giant",
+        "giant", "dwarf", "supergiant", "", "subgiant", "giant",
     ]  # fmt: skip
 
 

@@ -1,15 +1,18 @@
+import csv
 import json
 import subprocess
 import sys
 
 import click
+import icalendar
 import pytest
 from click.testing import CliRunner
 
 import pinlight as pl
 from pinlight.faces.cli import main
-from pinlight.faces.models import RankingAnswer
+from pinlight.faces.models import PlanAnswer, RankingAnswer
 from pinlight.resources import seed_folder
+from tests.arrays.test_oifits import oifits
 
 
 @pytest.fixture
@@ -54,7 +57,7 @@ def test_a_ranking_reads_well(run):
     assert sum(line.startswith(tuple("12345")) and "±" in line for line in lines) == 5
     assert "error %" in answer.stdout
     assert " too far, " in answer.stdout
-    assert max(len(line) for line in lines) <= 140
+    assert max(len(line) for line in lines) <= 150
     assert "…" not in answer.stdout.split("stars rank")[0]
 
 
@@ -129,6 +132,111 @@ def test_the_demo_ranks_every_target_and_ends(run):
     assert shown.stdout.count("error %") == len(demo["rankings"])
 
 
+NIGHT = ("--array", "north", "--mode", "H", "--night", "2026-12-01")
+
+
+def test_a_ranking_with_a_clock(run, catalogue):
+    answer = run("rank", "upsilon And", *NIGHT, "--with", "HD 9443, HIP 8000", "--json")
+    ranking = pl.rank(
+        catalogue, "upsilon And", array="north", mode="H", night="2026-12-01", with_=["HD 9443", "HIP 8000"]
+    )
+    told = json.loads(answer.stdout)
+    assert told == json.loads(json.dumps(ranking.to_dict()))
+    RankingAnswer.model_validate(told)
+    assert told["named_set"]["size"] == 2
+    shown = run("rank", "upsilon And", *NIGHT, "--best", 3).stdout
+    assert "in reach " in shown
+    assert "best set of 2: " in shown
+
+
+def test_a_track_over_an_array(run):
+    answer = run(
+        "array",
+        "track",
+        "north",
+        "60 28",
+        "--from",
+        "2026-12-01T20:00Z",
+        "--to",
+        "2026-12-01T22:00Z",
+        "--step-min",
+        30,
+        "--stations",
+        "Ash,Birch,Cedar",
+        "--json",
+    )
+    told = json.loads(answer.stdout)
+    assert [row["utc"] for row in told["times"]] == [
+        f"2026-12-01T{t}:00Z" for t in ("20:00", "20:30", "21:00", "21:30", "22:00")
+    ]
+    assert set(told["times"][0]) == {
+        "utc", "altitude_deg", "azimuth_deg", "hour_angle_h", "baselines", "in_reach", "blocked_by",
+    }  # fmt: skip
+    assert set(told["times"][0]["baselines"][0]) == {"stations", "u_m", "v_m", "w_m", "projected_m"}
+    assert len(told["times"][0]["baselines"]) == 3
+    for window in told["windows"]:
+        assert set(window) == {"start_utc", "end_utc"}
+    for row in told["times"]:
+        inside = any(w["start_utc"] <= row["utc"] <= w["end_utc"] for w in told["windows"])
+        assert row["in_reach"] == inside == (not row["blocked_by"])
+    noon = run("array", "track", "north", "60 28", "--from", "2026-12-01T11:00Z", "--to", "2026-12-01T12:00Z")
+    assert "sun" in noon.stdout
+    assert "in reach never" in noon.stdout
+
+
+def test_an_array_file_from_oifits(run, tmp_path, north):
+    made = oifits(tmp_path / "a.fits", north)
+    assert 'name = "Quillstone"' in run("array", "import", made).stdout
+    written = run("array", "import", made, "--output", tmp_path / "a.toml")
+    assert written.exit_code == 0
+    refused = run("array", "check", tmp_path / "a.toml")
+    assert refused.exit_code == 2
+    assert "drift.spread is '?'" in refused.stderr
+
+
+def test_a_night_is_planned_and_written_down(run, tmp_path):
+    papers = {kind: tmp_path / f"night.{kind}" for kind in ("csv", "ics", "html")}
+    answer = run(
+        "plan", seed_folder() / "targets.csv", *NIGHT, "--json", "--csv", papers["csv"], "--ics", papers["ics"],
+        "--report", papers["html"],
+    )  # fmt: skip
+    told = json.loads(answer.stdout)
+    PlanAnswer.model_validate(told)
+    looks = sum(len(block["looks"]) for block in told["blocks"])
+    with papers["csv"].open(encoding="utf-8", newline="") as file:
+        rows = list(csv.DictReader(file))
+    assert len(rows) == looks
+    assert rows[0]["start_utc"] == told["blocks"][0]["start_utc"]
+    calendar = icalendar.Calendar.from_ical(papers["ics"].read_bytes())
+    events = calendar.walk("VEVENT")
+    assert len(events) == len(told["blocks"])
+    assert events[0].decoded("dtstart").strftime("%Y-%m-%dT%H:%M:%SZ") == told["blocks"][0]["start_utc"]
+    page = papers["html"].read_text(encoding="utf-8")
+    assert "operating limits, Sun avoidance and laser and aircraft rules come first" in page
+    assert "http" not in page
+    for block in told["blocks"]:
+        assert block["target"] in page
+    shown = run("plan", seed_folder() / "targets.csv", *NIGHT)
+    assert "left out: Quiet Anvil: it never rises above 30 deg" in shown.stdout
+    assert "no plan exceeds" in shown.stdout
+
+
+def test_a_paper_that_cannot_be_written_is_named(run, tmp_path):
+    answer = run("plan", seed_folder() / "targets.csv", *NIGHT, "--csv", tmp_path / "no" / "such" / "n.csv")
+    assert answer.exit_code == 1
+    assert answer.stderr.splitlines()[-1].startswith("pinlight: cannot write ")
+
+
+def test_what_people_write_is_no_markup(run, tmp_path):
+    path = tmp_path / "t.csv"
+    path.write_text("name,ra_deg,dec_deg,H\n[/x],60,28,4\n[red]A,61,27,4\n", encoding="utf-8")
+    shown = run("rank", path, *NIGHT)
+    assert shown.exit_code == 0
+    assert "[/x]" in shown.stdout
+    assert "[red]A" in shown.stdout
+    assert "[/x]" in run("plan", path, *NIGHT).stdout
+
+
 QUICK = ("--baseline-m", 100, "--wavelength-um", 1.65)
 
 
@@ -152,6 +260,23 @@ QUICK = ("--baseline-m", 100, "--wavelength-um", 1.65)
         (("star", "HD 99999999"), "no star is named 'HD 99999999'"),
         (("diameter", "--V", 5), "1 magnitude is given; a colour takes at least two bands"),
         (("diameter", "--V", 5, "--Ks", 3, "--ra-deg", 5), "dec_deg is missing; give both or neither"),
+        (("rank", "x" * 5000, *QUICK), "name has 5000 letters; 200 are the most"),
+        (("rank", "tau Cet", "--array", "y" * 5000, "--mode", "H"), "it may be one of north, south"),
+        (("rank", "tau Cet", "--best", "many"), "Invalid value for '--best': 'many' is not a valid integer"),
+        (("rank",), "Missing argument 'TARGET'"),
+        (("nonsense",), "No such command 'nonsense'"),
+        (
+            ("rank", "tau Cet", "--array", "north", "--mode", "H", "--night", "soon"),
+            "night is 'soon'; write UTC as",
+        ),
+        (("rank", "tau Cet", *QUICK, "--night", "2026-12-01"), "is given without an array"),
+        (
+            ("plan", "none.csv", "--array", "north", "--mode", "H", "--night", "2026-12-01"),
+            "cannot read targets file",
+        ),
+        (("array", "track", "north", "60 28"), "from is missing; give from and to, or a night"),
+        (("array", "import", "none.fits"), "cannot read none.fits as OIFITS"),
+        (("serve", "--host", "no.such.invalid", "--open"), "cannot serve on no.such.invalid port 8765"),
         (("serve", "--host", "0.0.0.0"), "host is 0.0.0.0, which others can reach; add --open"),
         (("serve", "--arrays", "no-such-folder"), "arrays is no-such-folder, a folder without .toml files"),
     ],

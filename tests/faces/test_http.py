@@ -132,6 +132,89 @@ def test_bad_bodies_get_problem_details(client, body, kind, status):
     models.Problem.model_validate(json.loads(answer.data))
 
 
+@pytest.mark.parametrize(
+    ("body", "detail"),
+    [
+        (b"{", "the body is not JSON"),
+        (b"[" * 50_000, "the body is nested too deeply"),
+        (b'{"target": {"ra_deg": 10}, "array": "north"}', "target.dec_deg is missing"),
+        (b'{"target": {"ra_deg": NaN, "dec_deg": 5}, "array": "north"}', "target.ra_deg is nan"),
+        (rb'{"target": "\ud800", "array": "north", "mode": "H"}', "half a character"),
+        (
+            b'{"target": {"ra_deg": 1, "dec_deg": 2, "name": "\\u0007"}, "array": "north", "mode": "H"}',
+            "it must be printable",
+        ),
+        (b'{"target": "' + b"1" * 100_000 + b'", "array": "north", "mode": "H"}', "at most 200 characters"),
+    ],
+)
+def test_what_is_wrong_with_a_body_is_told(client, body, detail):
+    answer = client.post("/api/v1/rankings", data=body, content_type="application/json")
+    assert answer.status_code == 400
+    assert detail in json.loads(answer.data)["detail"]
+    assert len(answer.data) < 1000
+
+
+def test_a_ranking_with_a_clock_over_http(client, catalogue):
+    parameters = {
+        "target": "150 20",
+        "array": "north",
+        "mode": "H",
+        "from": "2026-12-02T01:00Z",
+        "to": "2026-12-02T04:00Z",
+    }
+    answer = get(client, "rankings", **parameters, **{"with": "HD 88009, HD 87646"})
+    assert answer.status_code == 200, answer.json
+    models.RankingAnswer.model_validate(answer.json)
+    ranking = pl.rank(
+        catalogue, "150 20", array="north", mode="H", from_="2026-12-02T01:00Z", to="2026-12-02T04:00Z",
+        with_=["HD 88009", "HD 87646"],
+    )  # fmt: skip
+    assert answer.json == json.loads(json.dumps(ranking.to_dict()))
+    posted = client.post("/api/v1/rankings", json=parameters | {"with": ["HD 88009", "HD 87646"]})
+    assert posted.json == answer.json
+
+
+def test_a_plan_over_http(client):
+    targets = [
+        {
+            "name": "Slow Ember",
+            "ra_deg": 61.9,
+            "dec_deg": 27.3,
+            "magnitudes": {"H": 3.9},
+            "priority": 1,
+            "repeats": 2,
+        },
+        {"name": "Never up", "ra_deg": 61.9, "dec_deg": -67.3},
+    ]
+    answer = client.post(
+        "/api/v1/plans", json={"targets": targets, "array": "north", "mode": "H", "night": "2026-12-01"}
+    )
+    assert answer.status_code == 200, answer.json
+    models.PlanAnswer.model_validate(answer.json)
+    assert {block["target"] for block in answer.json["blocks"]} == {"Slow Ember"}
+    assert answer.json["unscheduled"] == [{"target": "Never up", "reason": "it never rises above 30 deg"}]
+
+
+@pytest.mark.parametrize(
+    ("change", "detail"),
+    [
+        ({"targets": []}, "targets is []"),
+        ({"targets": [{"ra_deg": 1}]}, "targets[0].dec_deg is missing"),
+        ({"targets": [{"ra_deg": 1, "dec_deg": 95}]}, "dec_deg is 95"),
+        ({"targets": [{"ra_deg": 1, "dec_deg": 5, "priority": 0}]}, "priority of"),
+        ({"night": None}, "night is missing"),
+        ({"night": "2026-12-01", "from": "2026-12-01", "to": "2026-12-02"}, "night and from are both given"),
+        ({"time_limit_s": 1e9}, "time_limit_s is 1000000000.0"),
+        ({"colour": 1}, "colour is not a known key"),
+    ],
+)
+def test_a_bad_plan_is_told(client, change, detail):
+    body = {"targets": [{"ra_deg": 60, "dec_deg": 28}], "array": "north", "mode": "H", "night": "2026-12-01"}
+    answer = client.post("/api/v1/plans", json=body | change)
+    assert answer.status_code == 400, answer.json
+    assert detail in json.loads(answer.data)["detail"]
+
+
 def test_stars_by_name_and_by_place(client):
     by_name = get(client, "stars", name="tau ceti").json
     models.StarsAnswer.model_validate(by_name)
@@ -202,7 +285,7 @@ def test_the_openapi_description_covers_every_route(client):
     parameters = {p["name"] for p in described["paths"]["/api/v1/rankings"]["get"]["parameters"]}
     assert parameters == {
         "target", "array", "stations", "mode", "baseline_m", "wavelength_um", "separation_max_deg",
-        "magnitude_max", "v2_min", "judge", "best", "edition",
+        "magnitude_max", "v2_min", "judge", "best", "edition", "night", "at", "from", "to", "with",
     }  # fmt: skip
     text = json.dumps(described)
     for reference in {part.split('"')[0] for part in text.split("#/components/schemas/")[1:]}:

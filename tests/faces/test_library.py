@@ -28,6 +28,14 @@ def test_an_array_object_a_file_and_a_name_are_the_same(catalogue, north):
     assert all(answer == answers[0] for answer in answers)
 
 
+def test_the_best_set_of_a_size(catalogue):
+    options = {"array": "north", "mode": "H", "night": "2026-12-01"}
+    pair = pl.best_set(catalogue, "60 28", 2, **options)
+    assert pair == pl.rank(catalogue, "60 28", **options).best_sets[1]
+    with pytest.raises(pl.InputError, match="size is 7; it may be one of 1, 2, 3, 4"):
+        pl.best_set(catalogue, "60 28", 7, **options)
+
+
 def test_a_star_of_the_catalogue_brings_its_magnitudes(catalogue):
     target = resolve_target(catalogue, "τ Ceti")
     assert target.name == "tau Cet"
@@ -77,8 +85,14 @@ def test_a_name_that_is_neither_star_nor_place(catalogue):
         ("name,ra_deg,dec_deg,diameter_mas\nA,10,5,-1\n", "line 2: diameter_mas is -1; it must be positive"),
         ("name,ra_deg,dec_deg,V\nA,10,5,99\n", "line 2: V is 99; a magnitude lies between"),
         ("name,ra_deg,dec_deg,V\nA,10,5,nan\n", "line 2: V is nan"),
-        ("who,where\nA,10\n", "line 2: name is missing"),
-        ("", "has no rows"),
+        ("who,where\nA,10\n", "has columns who, where; name, ra_deg, dec_deg missing"),
+        ("", "has columns none; name, ra_deg, dec_deg missing"),
+        ("name;ra_deg;dec_deg\nA;1;2\n", "commas part them"),
+        ("name,ra_deg,dec_deg\n,,\n", "has no rows"),
+        ("name,ra_deg,dec_deg,V,v\nA,1,2,3,4\n", "has the column V twice"),
+        ('name,ra_deg,dec_deg\n\n"A\nB",1,x\n', "line 4: dec_deg is 'x'"),
+        ("name,ra_deg,dec_deg,repeats\nA,1,2,1.5\n", "repeats is 1.5; it must be a whole number"),
+        ("name,ra_deg,dec_deg,from\nA,1,2,soon\n", "from is 'soon'; write UTC as"),
     ],
 )
 def test_a_wrong_targets_file_is_told_its_line(tmp_path, text, message):

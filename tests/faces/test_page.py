@@ -63,11 +63,13 @@ def test_no_address_leaves_the_server(client):
 
 def test_bad_input_is_told_on_the_page(client):
     page = client.get("/", query_string={"target": "tau Ceet", "setup": "north/H"})
-    assert page.status_code == 200
+    assert page.status_code == 404
     assert "no star is named" in page.text
     assert 'role="alert"' in page.text
     assert 'value="tau Ceet"' in page.text
-    assert "it may be one of north, south" in client.get("/?target=tau+Cet&setup=east/H").text
+    wrong = client.get("/?target=tau+Cet&setup=east/H")
+    assert wrong.status_code == 404
+    assert "it may be one of north/H, north/K" in wrong.text
 
 
 def test_what_people_type_is_escaped(client):

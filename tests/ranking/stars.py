@@ -30,6 +30,10 @@ def columns(stars: list[dict]) -> StarColumns:
         spectral_types=np.array([b"K0V"] * len(filled), dtype="S8"),
         ra_deg=np.array([s["ra_deg"] for s in filled]),
         dec_deg=np.array([s["dec_deg"] for s in filled]),
+        pm_ra_mas_yr=np.zeros(len(filled), np.float32),
+        pm_dec_mas_yr=np.zeros(len(filled), np.float32),
+        parallax_mas=np.full(len(filled), 20, np.float32),
+        radial_velocity_km_s=np.zeros(len(filled), np.float32),
         flags=np.array([flag_bits(s["flags"]) for s in filled], dtype=np.uint64),
         magnitudes={band: floats(band) for band in ("V", "H", "Ks")},
         magnitude_errors={band: np.full(len(filled), 0.02, np.float32) for band in ("V", "H", "Ks")},
@@ -48,16 +52,16 @@ def columns(stars: list[dict]) -> StarColumns:
     )
     row_of = {s["id"]: row for row, s in enumerate(filled)}
     companions = sorted(
-        (row_of[index + 1], arcsec, delta)
+        (row_of[index + 1], arcsec, *deltas)
         for index, star in enumerate(stars)
-        for arcsec, delta in star.get("companions", [])
+        for arcsec, *deltas in star.get("companions", [])
     )
     if companions:
-        rows, arcsecs, deltas = (np.array(values) for values in zip(*companions, strict=True))
+        rows, arcsecs, by_v, by_ks = (np.array(values) for values in zip(*companions, strict=True))
         made = replace(
             made,
             companion_rows=rows,
             companion_separations_arcsec=arcsecs.astype(np.float32),
-            companion_deltas_mag={"V": deltas.astype(np.float32), "Ks": deltas.astype(np.float32)},
+            companion_deltas_mag={"V": by_v.astype(np.float32), "Ks": by_ks.astype(np.float32)},
         )
     return made

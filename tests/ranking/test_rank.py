@@ -101,7 +101,7 @@ def test_a_term_that_cannot_be_computed_is_null_and_noted(north):
         ({"flags": "eclipsing_binary variable"}, "close_binary"),
         ({"flags": "composite_spectrum"}, "close_binary"),
         ({"flags": "double"}, "companion"),
-        ({"companions": [(1.0, 1.5)]}, "companion"),
+        ({"companions": [(1.0, 1.5, 1.5)]}, "companion"),
         ({"flags": "variable mira"}, "variable"),
         ({"flags": "be_star"}, "variable"),
         ({"flags": "discordant"}, "discordant"),
@@ -112,6 +112,70 @@ def test_every_gate_counts_its_star_by_reason(star, reason):
     answer = rank(columns([star, {"dec_deg": 20.5}]), TARGET, QUICK)
     assert answer.excluded == {reason: 1}
     assert [c.star_id for c in answer.calibrators] == [2]
+
+
+@pytest.mark.parametrize(
+    ("words", "reason"),
+    [
+        *((word, "close_binary") for word in (
+            "spectroscopic_binary", "eclipsing_binary", "ellipsoidal", "active_binary", "cataclysmic",
+            "xray_binary", "composite_spectrum",
+        )),
+        *((word, "variable") for word in (
+            "pulsating", "semiregular", "long_period", "mira", "cepheid", "rr_lyrae", "rv_tauri",
+            "sx_phoenicis", "flare", "orion_variable", "irregular", "r_crb", "be_star", "emission_line",
+            "pre_main_sequence", "t_tauri", "carbon_star", "s_star", "wolf_rayet",
+        )),
+    ],
+)  # fmt: skip
+def test_every_unsteady_kind_is_kept_out(words, reason):
+    assert rank(columns([{"flags": words}]), TARGET, QUICK).excluded == {reason: 1}
+
+
+@pytest.mark.parametrize(
+    "word", ["delta_scuti", "gamma_doradus", "beta_cephei", "alpha2_cvn", "by_draconis", "rotating", "variable"]
+)
+def test_small_variables_stay_in(word):
+    assert rank(columns([{"flags": word}]), TARGET, QUICK).excluded == {}
+
+
+def test_a_companion_excludes_from_five_per_cent_on():
+    # sqrt(2) f / (1 + f)^2 = 0.05 at f = 0.0383, 3.54 mag fainter.
+    answer = rank(
+        columns([{"companions": [(1.0, 0, 3.4)]}, {"dec_deg": 20.5, "companions": [(1.0, 0, 3.7)]}]),
+        TARGET,
+        QUICK,
+    )
+    assert answer.excluded == {"companion": 1}
+    assert only(answer).star_id == 2
+
+
+def test_a_companion_counts_in_the_band_of_the_camera(north):
+    stars = columns([{"companions": [(1.0, 4.0, 6.0)]}])
+    visible, infrared = (
+        only(rank(stars, TARGET, setup_of(north, ["Ash", "Birch"], name))) for name in ("red", "K")
+    )
+    assert visible.budget["companion"] == pytest.approx(float(companion_error(10**-1.6)), rel=1e-6)
+    assert infrared.budget["companion"] == pytest.approx(float(companion_error(10**-2.4)), rel=1e-6)
+
+
+def test_the_time_between_looks_is_an_integration_and_a_slew(north):
+    # Common practice, no source: five minutes to slew and find fringes.
+    assert setup_of(north, None, "red").look_interval_min == pytest.approx(420 / 60 + 5)
+
+
+def test_a_star_that_never_rises_is_kept_out(north):
+    stars = columns([{"dec_deg": -25.0}, {"dec_deg": -20.0}])
+    # 90 - 38.4 + 21.6: culmination at 30 deg, the array's limit, for declination -21.6.
+    answer = rank(stars, Target(100.0, -22.0), setup_of(north, None, "H"))
+    assert answer.excluded == {"never_up": 1}
+    assert any("never rises" in note for note in answer.notes)
+
+
+def test_past_the_first_null_a_star_is_no_calibrator_whatever_the_floor():
+    stars = columns([{"theta": 5.5, "u": 0.0}])
+    limits = QUICK.limits.replace(v2_min=0.0)
+    assert rank(stars, TARGET, QUICK, limits=limits).excluded == {"resolved": 1}
 
 
 def test_too_bright_and_barred(south):
@@ -126,8 +190,8 @@ def test_small_variables_and_faint_companions_stay_in_with_their_cost():
     stars = columns(
         [
             {"flags": "variable delta_scuti"},
-            {"dec_deg": 20.5, "companions": [(1.2, 4.0)]},
-            {"dec_deg": 20.6, "companions": [(30.0, 0.0)]},
+            {"dec_deg": 20.5, "companions": [(1.2, 9.0, 4.0)]},
+            {"dec_deg": 20.6, "companions": [(30.0, 0.0, 0.0)]},
         ]
     )
     answer = rank(stars, TARGET, QUICK)
@@ -139,7 +203,7 @@ def test_small_variables_and_faint_companions_stay_in_with_their_cost():
 
 def test_a_component_whose_neighbour_is_known_is_not_suspected():
     stars = columns(
-        [{"flags": "component", "companions": [(30.0, 1.0)]}, {"dec_deg": 20.5, "flags": "component"}]
+        [{"flags": "component", "companions": [(30.0, 1.0, 1.0)]}, {"dec_deg": 20.5, "flags": "component"}]
     )
     terms = {c.star_id: c.budget["companion"] for c in rank(stars, TARGET, QUICK).calibrators}
     assert terms[1] == 0

@@ -66,6 +66,8 @@ def test_a_star_without_motion_stays():
         "10 15 30.6 +20 05 06",
         "10h15m30.6s +20d05m06s",
         "10h15m30.6s+20d05m06s",
+        "10 15 30.6 20 05 06",
+        "10:15:30.6 20:05:06",
         "10:15:30.6, +20:05:06",
         "153.8775 20.085",
         "153.8775, +20.085",
@@ -74,6 +76,12 @@ def test_a_star_without_motion_stays():
 )
 def test_the_ways_people_write_positions_agree_with_astropy(text):
     theirs = SkyCoord("10h15m30.6s +20d05m06s")
+    assert parse_coordinates(text) == pytest.approx((theirs.ra.deg, theirs.dec.deg), abs=1e-9)
+
+
+@pytest.mark.parametrize("text", ["10:06 18:16", "10 06 18 16", "10h06m 18d16m", "10:06 +18:16"])
+def test_seconds_may_be_left_out(text):
+    theirs = SkyCoord("10h06m00s +18d16m00s")
     assert parse_coordinates(text) == pytest.approx((theirs.ra.deg, theirs.dec.deg), abs=1e-9)
 
 
@@ -91,6 +99,12 @@ def test_a_declination_just_south_of_the_equator_is_south():
         ("nan 20", "ra_deg is nan"),
         ("10 inf", "dec_deg is inf"),
         ("somewhere", "is no position"),
+        ("10 20 30", "leaves open where the declination begins"),
+        ("10:15:30 20", "has 1 numbers in a coordinate; it takes 2 or 3"),
+        ("10:15:30.5 12", "has 1 numbers in a coordinate"),
+        ("10h15m30s20d05m06s", "leaves open where the declination begins"),
+        ("1:1:1" + " " * 90 + "1" + " " * 90 + "x", "is no position"),
+        ("1" * 100_000, "is no position"),
     ],
 )
 def test_an_impossible_position_is_named(text, message):

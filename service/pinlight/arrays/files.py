@@ -4,16 +4,37 @@ import tomllib
 from pathlib import Path
 from typing import Annotated, Any, Self
 
-from pydantic import AfterValidator, BaseModel, ConfigDict, Field, ValidationError, model_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    ValidationError,
+    model_validator,
+)
 
 from pinlight.errors import InputError
-from pinlight.photometry.bands import band
+from pinlight.photometry.bands import BANDS
 
 __all__ = ["Array", "Drift", "Limits", "Mode", "Station", "describe", "load_array"]
 
 
+def _number(value: object) -> object:
+    if isinstance(value, bool | str):
+        raise ValueError("it must be a number")  # noqa: TRY004 - pydantic reports ValueErrors
+    return value
+
+
+def _label(value: object) -> object:
+    if isinstance(value, str) and (not value.strip() or "," in value or not value.isprintable()):
+        raise ValueError("a name must be printable and without commas")
+    return value
+
+
 def _known_band(name: str) -> str:
-    band(name)
+    if name not in BANDS:
+        raise ValueError(f"it may be one of {', '.join(BANDS)}")
     return name
 
 
@@ -23,59 +44,60 @@ class _Part(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False)
 
 
-Positive = Annotated[float, Field(gt=0)]
-NotNegative = Annotated[float, Field(ge=0)]
-Wavelength = Annotated[float, Field(gt=0.1, le=30)]
+Number = Annotated[float, BeforeValidator(_number)]
+Name = Annotated[str, BeforeValidator(_label)]
+Metres = Annotated[Number, Field(ge=-1e5, le=1e5)]
+Wavelength = Annotated[Number, Field(gt=0.1, le=30)]
 
 
 class Drift(_Part):
     """How the transfer function wanders: relative spread, time and angle over which it forgets."""
 
-    spread: NotNegative
-    time_min: Positive
-    angle_deg: Positive
-    brightness_per_mag: NotNegative
+    spread: Annotated[Number, Field(ge=0, le=10)]
+    time_min: Annotated[Number, Field(gt=0, le=1e6)]
+    angle_deg: Annotated[Number, Field(gt=0, le=1e6)]
+    brightness_per_mag: Annotated[Number, Field(ge=0, le=10)]
 
 
 class Limits(_Part):
     """What the array will not do, and what its team will not accept."""
 
-    altitude_min_deg: Annotated[float, Field(ge=0, lt=90)]
-    sun_altitude_max_deg: Annotated[float, Field(ge=-90, le=0)]
-    moon_distance_min_deg: Annotated[float, Field(ge=0, le=180)]
-    separation_max_deg: Annotated[float, Field(gt=0, le=180)]
-    v2_min: Annotated[float, Field(ge=0, lt=1)]
+    altitude_min_deg: Annotated[Number, Field(ge=0, lt=90)]
+    sun_altitude_max_deg: Annotated[Number, Field(ge=-90, le=0)]
+    moon_distance_min_deg: Annotated[Number, Field(ge=0, le=180)]
+    separation_max_deg: Annotated[Number, Field(gt=0, le=180)]
+    v2_min: Annotated[Number, Field(ge=0, lt=1)]
 
 
 class Station(_Part):
     """One telescope: where it stands and what its delay line can do (optical path)."""
 
-    name: Annotated[str, Field(min_length=1)]
-    east_m: float
-    north_m: float
-    up_m: float
-    fixed_path_m: float
-    coarse_paths_m: Annotated[tuple[float, ...], Field(min_length=1)]
-    cart_m: NotNegative
-    horizon: tuple[tuple[Annotated[float, Field(ge=0, le=360)], Annotated[float, Field(ge=0, lt=90)]], ...]
+    name: Name
+    east_m: Metres
+    north_m: Metres
+    up_m: Metres
+    fixed_path_m: Metres
+    coarse_paths_m: Annotated[tuple[Metres, ...], Field(min_length=1, max_length=64)]
+    cart_m: Annotated[Metres, Field(ge=0)]
+    horizon: tuple[tuple[Annotated[Number, Field(ge=0, le=360)], Annotated[Number, Field(ge=0, lt=90)]], ...]
 
 
 class Mode(_Part):
     """One way of using the camera; counts are of one baseline, both beams, all channels together."""
 
-    name: Annotated[str, Field(min_length=1)]
+    name: Name
     band: Annotated[str, AfterValidator(_known_band)]
     wavelength_um: Wavelength
-    bandwidth_um: Positive
-    channels: Annotated[int, Field(ge=1, le=4096)]
-    frame_ms: Positive
-    counts_per_frame_at_mag0: Positive
-    read_variance: NotNegative
-    integration_s: Positive
-    system_v2: Annotated[float, Field(gt=0, le=1)]
-    limiting_magnitude: float
-    bright_limit_magnitude: float
-    field_arcsec: Positive
+    bandwidth_um: Annotated[Number, Field(gt=0, le=60)]
+    channels: Annotated[int, Field(ge=1, le=4096), BeforeValidator(_number)]
+    frame_ms: Annotated[Number, Field(gt=0, le=1e6)]
+    counts_per_frame_at_mag0: Annotated[Number, Field(ge=1e-3, le=1e15)]
+    read_variance: Annotated[Number, Field(ge=0, le=1e12)]
+    integration_s: Annotated[Number, Field(ge=0.1, le=86_400)]
+    system_v2: Annotated[Number, Field(ge=1e-6, le=1)]
+    limiting_magnitude: Annotated[Number, Field(ge=-5, le=30)]
+    bright_limit_magnitude: Annotated[Number, Field(ge=-30, le=30)]
+    field_arcsec: Annotated[Number, Field(gt=0, le=3600)]
 
     @model_validator(mode="after")
     def _fits(self) -> Self:
@@ -89,10 +111,10 @@ class Mode(_Part):
 class Array(_Part):
     """An array: its site, its stations and its camera's modes."""
 
-    name: Annotated[str, Field(min_length=1)]
-    latitude_deg: Annotated[float, Field(ge=-90, le=90)]
-    longitude_deg: Annotated[float, Field(ge=-180, le=360)]
-    height_m: Annotated[float, Field(ge=-500, le=9000)]
+    name: Name
+    latitude_deg: Annotated[Number, Field(ge=-90, le=90)]
+    longitude_deg: Annotated[Number, Field(ge=-180, le=360)]
+    height_m: Annotated[Number, Field(ge=-500, le=9000)]
     drift: Drift
     limits: Limits
     station: Annotated[tuple[Station, ...], Field(min_length=2)]
@@ -160,7 +182,7 @@ def load_array(path: str | Path) -> Array:
         the message names the file and the key.
     """
     try:
-        content: dict[str, Any] = tomllib.loads(Path(path).read_text(encoding="utf-8"))
+        content: dict[str, Any] = tomllib.loads(Path(path).read_text(encoding="utf-8-sig"))
     except OSError as error:
         raise InputError(f"cannot read array file {path}: {error.strerror}") from error
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
@@ -172,15 +194,33 @@ def load_array(path: str | Path) -> Array:
 
 
 def describe(error: ValidationError) -> str:
-    """The first thing a validation found, in one line with key, value and what it may be."""
-    first = error.errors(include_url=False)[0]
-    key = "".join(f"[{part}]" if isinstance(part, int) else f".{part}" for part in first["loc"]).lstrip(".")
-    more = f" (and {error.error_count() - 1} more)" if error.error_count() > 1 else ""
-    if first["type"] == "missing":
-        return f"{key} is missing{more}"
-    if first["type"] in ("extra_forbidden", "unexpected_keyword_argument"):
-        return f"{key} is not a known key{more}"
-    message = first["msg"].removeprefix("Value error, ")
-    if not key or first["type"] == "value_error":
-        return f"{key + ': ' if key else ''}{message}{more}"
-    return f"{key} is {first['input']!r}: {message[0].lower()}{message[1:]}{more}"
+    """What a validation found, in one line: key, value and what it may be; three findings at the most."""
+    found = [_finding(dict(one)) for one in error.errors(include_url=False)]
+    more = f" (and {len(found) - 3} more)" if len(found) > 3 else ""
+    return "; ".join(found[:3]) + more
+
+
+def _finding(one: dict[str, Any]) -> str:
+    parts = [part for part in one["loc"] if part not in _TAGS]
+    key = "".join(f"[{part}]" if isinstance(part, int) else f".{part}" for part in parts).lstrip(".")
+    given = repr(one["input"])
+    shown = given if len(given) <= 60 else f"{given[:57]}…"
+    message = one["msg"].removeprefix("Value error, ")
+    if one["type"] == "missing":
+        return f"{key} is missing"
+    if one["type"] == "extra_forbidden":
+        return f"{key} is not a known key"
+    if not key:
+        return message
+    hint = ""
+    if (
+        key.endswith("wavelength_um")
+        and isinstance(one["input"], int | float)
+        and 100 <= one["input"] <= 30_000
+    ):
+        hint = f" ({one['input']:g} nm is {one['input'] / 1000:g} um)"
+    return f"{key} is {shown}: {message[0].lower()}{message[1:]}{hint}"
+
+
+# Names of alternatives in the HTTP interface's questions; they stand in pydantic's paths, not in people's.
+_TAGS = frozenset({"own-target", "named-target"})

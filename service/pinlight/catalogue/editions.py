@@ -34,8 +34,9 @@ def _column(rows: list[Any], index: int, kind: str = "f8") -> NDArray[Any]:
 def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict[str, Any]]:
     """All arrays of an edition, rows sorted by cell and Ks, and what the manifest says of them."""
     star = select(
-        Star.id, Star.name, Star.ra_deg, Star.dec_deg, Star.spectral_type, Star.flags, Star.cell
-    ).order_by(Star.id)
+        Star.id, Star.name, Star.ra_deg, Star.dec_deg, Star.spectral_type, Star.flags, Star.cell,
+        Star.pm_ra_mas_yr, Star.pm_dec_mas_yr, Star.parallax_mas, Star.radial_velocity_km_s,
+    ).order_by(Star.id)  # fmt: skip
     rows: list[Any] = list(connection.execute(star))
     ids = _column(rows, 0, "i8")
     place = {int(star_id): index for index, star_id in enumerate(ids)}
@@ -46,6 +47,10 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
         "ra_deg": _column(rows, 2),
         "dec_deg": _column(rows, 3),
         "spectral_types": np.array([row[4].encode() for row in rows], dtype="S"),
+        "pm_ra_mas_yr": _column(rows, 7, "f4"),
+        "pm_dec_mas_yr": _column(rows, 8, "f4"),
+        "parallax_mas": _column(rows, 9, "f4"),
+        "radial_velocity_km_s": _column(rows, 10, "f4"),
     }
     flags = np.array([flag_bits(row[5]) for row in rows], dtype=np.uint64)
     cells = _column(rows, 6, "i8")
@@ -60,8 +65,8 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
 
     diameter = select(
         Diameter.star_id, Diameter.limb_darkened_mas, Diameter.own_error_mas, Diameter.shared_error_mas,
-        Diameter.teff_k, Diameter.logg, Diameter.spectral_code, Diameter.discordant,
-        Diameter.luminosity_group, Diameter.relation_set, Diameter.parts,
+        Diameter.teff_k, Diameter.logg, Diameter.spectral_code, Diameter.discordant, Diameter.parts,
+        Diameter.relation_set,
     ).order_by(Diameter.star_id)  # fmt: skip
     rows = list(connection.execute(diameter))
     at = np.array([place[row[0]] for row in rows], dtype=np.int64)
@@ -78,10 +83,10 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
     flags[at] |= np.where([row[7] for row in rows], np.uint64(flag_bits("discordant")), np.uint64(0))
     columns["flags"] = flags
     fast = (flags & np.uint64(flag_bits("fast_rotator"))) != 0
-    dwarf = spread(np.array([row[8] == "dwarf" for row in rows]), "i1") == 1
     code = spread(_column(rows, 6), "f8")
-    columns["oblateness"] = oblateness_bound(code, dwarf, fast).round(4).astype(np.float32)
-    used = [list(json.loads(row[10])) for row in rows]
+    columns["oblateness"] = oblateness_bound(code, fast).round(4).astype(np.float32)
+    used = [list(json.loads(row[8])) for row in rows]
+    relation_sets = sorted({row[9] for row in rows})
     relation_names = sorted({name for names in used for name in names})
     bit = {name: 1 << index for index, name in enumerate(relation_names)}
     columns["relations_used"] = spread(
@@ -105,7 +110,6 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
     columns["companion_rows"] = at[by_row]
     for index, name in ((1, "separation"), (2, "delta_V"), (3, "delta_Ks")):
         columns[f"companion_{name}"] = _column(rows, index, "f4")[by_row]
-    relation_sets = sorted({row[9] for row in connection.execute(diameter)})
     return columns, {"relations": relation_names, "relation_sets": relation_sets, "stars": count}
 
 
@@ -116,6 +120,16 @@ def _content_hash(columns: dict[str, NDArray[Any]], facts: dict[str, Any]) -> st
         digest.update(f"{name} {column.dtype.str} {column.shape}".encode())
         digest.update(column.tobytes())
     return digest.hexdigest()
+
+
+def _is_whole(place: Path, columns: dict[str, NDArray[Any]]) -> bool:
+    """Whether an edition's folder holds every file, each of the size that it should have."""
+    try:
+        if not (place / MANIFEST).is_file():
+            return False
+        return all((place / f"{key}.npy").stat().st_size > column.nbytes for key, column in columns.items())
+    except OSError:
+        return False
 
 
 def write_edition(connection: Connection, folder: Path) -> tuple[str, dict[str, Any]]:
@@ -139,7 +153,7 @@ def write_edition(connection: Connection, folder: Path) -> tuple[str, dict[str, 
     name = full_hash[:12]
     manifest = {"format": _FORMAT, "name": name, "hash": full_hash, **facts}
     final = folder / name
-    if (final / MANIFEST).is_file():
+    if _is_whole(final, columns):
         return name, manifest
     try:
         folder.mkdir(parents=True, exist_ok=True)
@@ -149,13 +163,16 @@ def write_edition(connection: Connection, folder: Path) -> tuple[str, dict[str, 
                 np.save(aside / f"{key}.npy", column)
             (aside / MANIFEST).write_text(json.dumps(manifest, indent=1, sort_keys=True), encoding="utf-8")
             aside.chmod(0o755)
+            if final.exists() and not _is_whole(final, columns):
+                os.replace(final, aside.with_name(f"{aside.name}-damaged"))
             try:
                 os.replace(aside, final)
             except OSError:
-                if not (final / MANIFEST).is_file():  # else another process made the same one first
+                if not _is_whole(final, columns):  # else another process made the same one first
                     raise
         finally:
-            shutil.rmtree(aside, ignore_errors=True)
+            for left_over in (aside, aside.with_name(f"{aside.name}-damaged")):
+                shutil.rmtree(left_over, ignore_errors=True)
     except OSError as error:
         raise CatalogueError(f"cannot write edition {final}: {error.strerror or error}") from error
     return name, manifest
@@ -186,6 +203,10 @@ def open_edition(folder: Path, name: str) -> StarColumns:
             spectral_types=column("spectral_types"),
             ra_deg=column("ra_deg"),
             dec_deg=column("dec_deg"),
+            pm_ra_mas_yr=column("pm_ra_mas_yr"),
+            pm_dec_mas_yr=column("pm_dec_mas_yr"),
+            parallax_mas=column("parallax_mas"),
+            radial_velocity_km_s=column("radial_velocity_km_s"),
             flags=column("flags"),
             magnitudes={band: column(f"magnitude_{band}") for band in CATALOGUE_BANDS},
             magnitude_errors={band: column(f"magnitude_error_{band}") for band in CATALOGUE_BANDS},

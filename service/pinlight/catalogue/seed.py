@@ -19,7 +19,7 @@ from pinlight.diameters.prediction import Diameters, StarPhotometry, predict_dia
 from pinlight.diameters.relations import RelationSet, load_relations
 from pinlight.diameters.spectral import parse_spectral_type
 from pinlight.errors import SeedFileError
-from pinlight.photometry.bands import default_errors
+from pinlight.photometry.bands import default_errors, saturation_errors
 from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.ranking.columns import FLAGS
 from pinlight.resources import seed_folder
@@ -76,9 +76,13 @@ OBJECT_TYPES = {
 
 @dataclass(frozen=True)
 class SeedStars:
-    """The seed's columns, N stars; magnitudes have shape (N, 5), columns follow `CATALOGUE_BANDS`."""
+    """The seed's columns, N stars; magnitudes have shape (N, 5), columns follow `CATALOGUE_BANDS`.
+
+    `source_names` are the names that the stars' own source gives; all others come with the names.
+    """
 
     names: list[str]
+    source_names: list[str]
     identifiers: list[list[str]]
     object_types: list[str]
     spectral_types: list[str]
@@ -110,6 +114,7 @@ def read_seed(path: Path | None = None) -> SeedStars:
 
         stars = SeedStars(
             names=[str(name) for name in table["name"]],
+            source_names=[str(name) for name in table["source_name"]],
             identifiers=[str(names).split("|") for names in table["identifiers"]],
             object_types=[str(kind) for kind in table["object_type"]],
             spectral_types=[str(kind) for kind in table["spectral_type"]],
@@ -170,9 +175,7 @@ def fill_from_seed(connection: Connection, progress: Progress, path: Path | None
     """
     progress("reading the seed")
     stars = read_seed(path)
-    errors = np.stack(
-        [default_errors(band, stars.magnitudes[:, index]) for index, band in enumerate(CATALOGUE_BANDS)], axis=1
-    )
+    errors = _by_band(default_errors, stars.magnitudes)
     connection.execute(insert(Source), [STARS_SOURCE, NAMES_SOURCE])
     progress("writing stars and names")
     _bulk(connection, Star, _star_rows(stars))
@@ -185,6 +188,10 @@ def fill_from_seed(connection: Connection, progress: Progress, path: Path | None
         StarPhotometry(
             magnitudes=stars.magnitudes,
             errors=errors,
+            shared_errors=np.stack(
+                [saturation_errors(band, stars.magnitudes[:, i]) for i, band in enumerate(CATALOGUE_BANDS)],
+                axis=1,
+            ),
             spectral_types=stars.spectral_types,
             parallax_mas=stars.parallax_mas,
             galactic_latitude_deg=galactic_latitude_deg(stars.ra_deg, stars.dec_deg),
@@ -194,6 +201,12 @@ def fill_from_seed(connection: Connection, progress: Progress, path: Path | None
     progress("writing diameters")
     _bulk(connection, Diameter, _diameter_rows(diameters, relation_set))
     return len(stars.names)
+
+
+def _by_band(
+    function: Callable[[str, NDArray[np.float64]], NDArray[np.float64]], magnitudes: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    return np.stack([function(band, magnitudes[:, i]) for i, band in enumerate(CATALOGUE_BANDS)], axis=1)
 
 
 def _bulk(connection: Connection, table: type[Any], rows: Iterable[dict[str, Any]]) -> None:
@@ -251,7 +264,7 @@ def _identifier_rows(stars: SeedStars) -> Iterator[dict[str, Any]]:
                 "name": name,
                 "key": key,
                 "short": is_short,
-                "source_id": NAMES_SOURCE["id"] if name.startswith("HIP ") else STARS_SOURCE["id"],
+                "source_id": (STARS_SOURCE if name == stars.source_names[row] else NAMES_SOURCE)["id"],
             }
 
 

@@ -2,7 +2,9 @@
 
 import json
 import os
-from collections.abc import Callable
+import re
+import tempfile
+from collections.abc import Callable, Sequence
 from contextlib import contextmanager
 from datetime import UTC, datetime
 from functools import cached_property
@@ -11,8 +13,8 @@ from typing import Any
 from urllib.parse import quote
 
 from sqlalchemy import Engine, create_engine, event, func, insert, inspect, select, text
-from sqlalchemy.engine import URL, make_url
-from sqlalchemy.exc import ArgumentError, DBAPIError, SQLAlchemyError
+from sqlalchemy.engine import URL
+from sqlalchemy.exc import DBAPIError, SQLAlchemyError
 
 from pinlight.catalogue.editions import open_edition
 from pinlight.catalogue.names import name_key
@@ -34,6 +36,8 @@ __all__ = ["STANDINGS", "Catalogue", "default_url", "make_catalogue", "open_cata
 
 STANDINGS = ("vouched", "unproven", "doubted", "barred")
 _MOST_CHOICES = 8
+_LONGEST_NAME = 200
+_LOCK_S = 600
 
 
 def default_url() -> str:
@@ -43,16 +47,22 @@ def default_url() -> str:
     return os.environ.get("PINLIGHT_DB") or f"sqlite:///{user_data_path('pinlight') / 'pinlight.db'}"
 
 
-def _parse_url(url: str | None) -> tuple[URL, Path]:
-    """The URL and the file behind it; a plain path counts as a file."""
+def _path_of(url: str | None) -> Path:
+    """The file behind a URL such as ``sqlite:///FILE``; anything that is no URL is a file name."""
     given = url or default_url()
+    match = re.match(r"(\w+)(?:\+\w+)?:(?://)?", given)
+    if match and (match[1] == "sqlite" or "://" in match[0]):
+        # Only the kind of database is repeated: a URL may hold a password.
+        if match[1] != "sqlite":
+            raise InputError(f"db is a {match[1]} URL; this version keeps catalogues in files: sqlite:///FILE")
+        name = given.removeprefix("sqlite:///") if given.startswith("sqlite:///") else ""
+        if not name or name == ":memory:" or "?" in name:
+            raise InputError(f"db is {given!r}; write sqlite:///FILE or a file name")
+        given = name
     try:
-        parsed = make_url(given if ":" in given else f"sqlite:///{given}")
-    except ArgumentError as error:
-        raise InputError(f"db is {given!r}; write sqlite:///FILE or a file name") from error
-    if parsed.get_backend_name() != "sqlite" or not parsed.database or parsed.database == ":memory:":
-        raise InputError(f"db is {given!r}; this version keeps catalogues in files: write sqlite:///FILE")
-    return parsed, Path(parsed.database)
+        return Path(given).expanduser().resolve()
+    except (OSError, RuntimeError, ValueError) as error:
+        raise InputError(f"db is {given[:60]!r}, which is no usable file name: {error}") from error
 
 
 @contextmanager
@@ -69,10 +79,13 @@ def _database_errors(path: Path, doing: str) -> Any:
 
 def _engine(path: Path) -> Engine:
     """An engine on a file; on read-only ground one that asks SQLite for no lock or log file."""
-    url = f"sqlite:///{path}"
+    url = URL.create("sqlite", database=str(path))
     effective = os.access in os.supports_effective_ids
     if path.exists() and not os.access(path.parent, os.W_OK, effective_ids=effective):
-        url = f"sqlite:///file:{quote(str(path.absolute()))}?immutable=1&uri=true"
+        # Without a log beside it nobody is writing; with one, what it holds must be read too.
+        how = "mode=ro" if path.with_name(f"{path.name}-wal").exists() else "immutable=1"
+        as_uri = f"file:{quote(str(path))}?{how}"
+        url = URL.create("sqlite", database=as_uri, query={"uri": "true"})
     engine = create_engine(url, connect_args={"timeout": 30})
 
     @event.listens_for(engine, "connect")
@@ -115,16 +128,26 @@ def make_catalogue(
     CatalogueError
         If the place cannot be written, or holds something else or newer.
     """
-    from filelock import FileLock
+    from filelock import FileLock, Timeout
 
-    _, path = _parse_url(url)
+    path = _path_of(url)
     with _database_errors(path, "make"):
+        if path.exists() and not path.is_file():
+            raise CatalogueError(f"{path} is no ordinary file; choose another for the catalogue")
         path.parent.mkdir(parents=True, exist_ok=True)
-        with FileLock(f"{path}.lock"):
-            if path.exists() and path.stat().st_size > 0:
-                _migrate(path)
-            else:
-                _build(path, seed, progress)
+        if not path.exists():
+            with tempfile.TemporaryFile(dir=path.parent):  # fails at once where nothing can be written
+                pass
+        try:
+            with FileLock(f"{path}.lock", timeout=_LOCK_S):
+                if path.exists() and path.stat().st_size > 0:
+                    _migrate(path)
+                else:
+                    _build(path, seed, progress)
+        except Timeout as error:
+            raise CatalogueError(
+                f"another process has been making {path} for {_LOCK_S} s; try later"
+            ) from error
     return open_catalogue(url)
 
 
@@ -140,6 +163,12 @@ def _migrate(path: Path) -> None:
         if schema < SCHEMA:
             with engine.begin() as connection:
                 upgrade(connection)
+        catalogue = Catalogue(path, engine)
+        try:
+            if catalogue.editions():
+                catalogue.columns()
+        except CatalogueError:  # its files were lost or left behind; the same content makes them again
+            catalogue.freeze()
     finally:
         engine.dispose()
 
@@ -183,8 +212,10 @@ def open_catalogue(url: str | None = None) -> "Catalogue":
     CatalogueError
         If there is no catalogue, or one of another schema.
     """
-    _, path = _parse_url(url)
-    if not path.is_file():
+    path = _path_of(url)
+    with _database_errors(path, "open"):
+        found = path.is_file()
+    if not found:
         raise CatalogueError(f"there is no catalogue at {path}; run 'pinlight init' to make one")
     engine = _engine(path)
     with _database_errors(path, "open"):
@@ -267,36 +298,64 @@ class Catalogue:
         NotFoundError
             If none does; the message suggests near misses.
         """
+        if len(name) > _LONGEST_NAME:
+            raise InputError(f"name has {len(name)} letters; {_LONGEST_NAME} are the most")
         key = name_key(name)
-        if not key:
-            raise InputError(f"name is {name!r}; write a star's name, such as 'HD 10700' or 'tau Cet'")
+        if not key or not key.isprintable():  # half a character (a lone surrogate) is not printable
+            raise InputError(f"name is {name!a}; write a star's name, such as 'HD 10700' or 'tau Cet'")
+        rows = self._bearers(key)
+        if not rows and (without := re.fullmatch(r"(.*[^a-d])[a-d]{1,2}", key)):
+            rows = self._bearers(without[1])  # "alpha Cen A": the component letter is not in every list
+        exact = [row for row in rows if not row.short] or rows
+        written = name.strip()
+        for same in (
+            [row for row in exact if written == row.name],
+            [row for row in exact if written == row.identifier],
+        ):
+            if len(same) == 1:  # case and spelling may tell apart what the key does not
+                return int(same[0].id)
+        chosen = exact
+        if len(chosen) == 1:
+            return int(chosen[0].id)
+        if chosen:
+            shown = ", ".join(self._plain_name(row.id, row.name) for row in chosen[:_MOST_CHOICES])
+            more = ", …" if len(chosen) > _MOST_CHOICES else ""
+            raise InputError(f"name {written!r} may be any of {shown}{more}; give one of them")
+        near = self._near_misses(key)
+        hint = f"did you mean {' or '.join(near)}?" if near else "give its coordinates instead"
+        raise NotFoundError(f"no star is named {written!r}; {hint}")
+
+    def _bearers(self, key: str) -> Sequence[Any]:
         query = (
-            select(Star.id, Star.name, Identifier.short)
+            select(Star.id, Star.name, Identifier.name.label("identifier"), Identifier.short)
             .join(Identifier, Identifier.star_id == Star.id)
             .where(Identifier.key == key)
             .order_by(Star.name)
         )
         with _database_errors(self.path, "read"), self._engine.connect() as connection:
-            rows = connection.execute(query).all()
-        exact = [row for row in rows if not row.short] or rows
-        if len(exact) == 1:
-            return int(exact[0].id)
-        if exact:
-            names = [row.name for row in exact]
-            shown = ", ".join(names[:_MOST_CHOICES]) + (", …" if len(names) > _MOST_CHOICES else "")
-            raise InputError(f"name {name!r} may be any of {shown}; give one of them")
-        near = self._near_misses(key)
-        hint = f"did you mean {' or '.join(near)}?" if near else "give its coordinates instead"
-        raise NotFoundError(f"no star is named {name!r}; {hint}")
+            return connection.execute(query).all()
+
+    def _plain_name(self, star_id: int, name: str) -> str:
+        """A star's name, with a catalogue number beside it where case alone tells it from another's."""
+        if len({row.id for row in self._bearers(name_key(name)) if not row.short}) < 2:
+            return name
+        query = select(Identifier.name).where(Identifier.star_id == star_id, ~Identifier.short)
+        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+            others = sorted(other for (other,) in connection.execute(query) if re.match(r"H(D|IP|R) ", other))
+        return f"{name} ({others[0]})" if others else name
+
+    @cached_property
+    def _all_names(self) -> dict[str, str]:
+        """Every key and a name it stands for."""
+        query = select(Identifier.key, Identifier.name).where(~Identifier.short)
+        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+            return {row.key: row.name for row in connection.execute(query)}
 
     def _near_misses(self, key: str, most: int = 3) -> list[str]:
         from rapidfuzz import fuzz, process
 
-        query = select(Identifier.key, Identifier.name).where(~Identifier.short)
-        with self._engine.connect() as connection:
-            names = {row.key: row.name for row in connection.execute(query)}
-        near = process.extract(key, names.keys(), scorer=fuzz.ratio, limit=most, score_cutoff=75)
-        return [names[found] for found, _, _ in near]
+        near = process.extract(key, self._all_names.keys(), scorer=fuzz.ratio, limit=most, score_cutoff=75)
+        return [self._all_names[found] for found, _, _ in near]
 
     def standings(self) -> dict[int, str]:
         """The newest standing of every star that has one, by star id."""

@@ -28,6 +28,7 @@ _GIANT = np.array(
 )  # fmt: skip
 # log g along the main sequence and of giants (common practice, no source).
 _DWARF_LOGG = np.array([(5.0, 4.0), (30.0, 4.2), (40.0, 4.4), (50.0, 4.55), (60.0, 4.7), (66.0, 5.0)])
+_SUBGIANT_LOGG = np.array([(5.0, 3.9), (30.0, 3.9), (40.0, 3.9), (50.0, 3.6), (60.0, 3.0)])
 _GIANT_LOGG = np.array(
     [(5.0, 3.6), (30.0, 3.3), (45.0, 2.8), (50.0, 2.5), (55.0, 1.7), (60.0, 1.4), (66.0, 0.7)]
 )
@@ -78,7 +79,12 @@ def effective_temperature_k(code: Floats, group: NDArray[np.str_], v_ks: Floats)
 
 def surface_gravity(code: Floats, group: NDArray[np.str_]) -> Floats:
     """log g [cm/s^2] typical of a temperature code and luminosity group, shape (N,)."""
-    tables = {"dwarf": _DWARF_LOGG, "giant": _GIANT_LOGG, "supergiant": _SUPERGIANT_LOGG}
+    tables = {
+        "dwarf": _DWARF_LOGG,
+        "subgiant": _SUBGIANT_LOGG,
+        "giant": _GIANT_LOGG,
+        "supergiant": _SUPERGIANT_LOGG,
+    }
     logg = np.full(np.shape(code), np.nan)
     for name, table in tables.items():
         logg = np.where(group == name, np.interp(code, table[:, 0], table[:, 1]), logg)

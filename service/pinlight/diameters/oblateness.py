@@ -36,14 +36,14 @@ def roche_oblateness(v_eq_km_s: ArrayLike, radius_sun: ArrayLike, mass_sun: Arra
     return np.where(excess <= 0.5, excess / (1 + excess), np.nan)
 
 
-def oblateness_bound(spectral_code: ArrayLike, dwarf: ArrayLike, fast: ArrayLike) -> Floats:
+def oblateness_bound(spectral_code: ArrayLike, fast: ArrayLike) -> Floats:
     """The oblateness to assume where no rotation speed is known, shape (N,).
 
-    Earlier than F5 a dwarf is taken to turn at 150 km/s with 2 solar radii and masses, a star
-    flagged as a fast rotator at 280 km/s; later types turn slowly and are taken as round. An
-    early star without a luminosity class counts as a dwarf (common practice, no source).
+    Earlier than F5 a star is taken to turn at 150 km/s with 2 solar radii and masses, one flagged
+    as a fast rotator at 280 km/s; later types turn slowly and are taken as round (common
+    practice, no source).
     """
     early = np.asarray(spectral_code, float) < 35
     ordinary, rapid = (float(roche_oblateness(v, 2.0, 2.0)) for v in (150.0, 280.0))
-    bound = np.where(early & np.asarray(dwarf, bool), ordinary, 0.0)
+    bound = np.where(early, ordinary, 0.0)
     return np.where(np.asarray(fast, bool), rapid, bound)

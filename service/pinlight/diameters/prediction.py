@@ -31,6 +31,8 @@ class StarPhotometry:
     """What a prediction needs of N stars.
 
     magnitudes, errors : shape (N, 5), columns follow `CATALOGUE_BANDS`, NaN where missing
+    shared_errors : shape (N, 5), by how much each may be wrong together with other stars' magnitudes
+        of its kind, as where an instrument saturates; None for not at all
     spectral_types : N texts, '' where unknown
     parallax_mas, galactic_latitude_deg : shape (N,)
     av_mag, av_error_mag : shape (N,) or None for the prior of the dust model
@@ -41,6 +43,7 @@ class StarPhotometry:
     spectral_types: list[str]
     parallax_mas: Floats
     galactic_latitude_deg: Floats
+    shared_errors: Floats | None = None
     av_mag: Floats | None = None
     av_error_mag: Floats | None = None
 
@@ -120,7 +123,7 @@ def predict_diameters(stars: StarPhotometry, relation_set: RelationSet) -> Diame
         av_error = np.where(given, np.where(np.isfinite(error), error, fallback), av_error)
     types = [parse_spectral_type(text) for text in stars.spectral_types]
     v_ks = (v - ks) - av * (1 - relative_extinction("Ks"))
-    group = luminosity_groups(types, v_ks, v, stars.parallax_mas)
+    group = luminosity_groups(types, v_ks, v - av, stars.parallax_mas)
     code = np.array([spectral.code for spectral in types], dtype=float)
     normal = group != ""
     known_code = np.where(np.isnan(code) & normal, spectral_code_from_colour(v_ks), code)
@@ -173,7 +176,10 @@ def _combine(
     own = scaled @ scaled.transpose(0, 2, 1) + transformed @ transformed.transpose(0, 2, 1)
     own += (by_av[:, :, None] * by_av[:, None, :]) * (av_error[rows] ** 2)[:, None, None]
     own += np.diag(scatter**2)
-    common = shared @ shared.T
+    common = np.broadcast_to(shared @ shared.T, own.shape)
+    if stars.shared_errors is not None:
+        together = by_catalogue * np.where(errors > 0, stars.shared_errors[rows], 0.0)[:, None, :]
+        common = common + together @ together.transpose(0, 2, 1)
     both = applies[:, :, None] & applies[:, None, :]
     covariance = np.where(both, own + common, np.eye(len(relations)))
     inverse = np.linalg.inv(covariance)
@@ -196,7 +202,7 @@ def _combine(
     freedom = np.maximum(n_relations - 1, 0)
     probability = np.where(freedom > 0, chdtrc(np.maximum(freedom, 1), chi_squared), 1.0)
     variance = 1 / safe
-    shared_variance = np.einsum("ni,ij,nj->n", weights, common, weights)
+    shared_variance = np.einsum("ni,nij,nj->n", weights, common, weights)
     scale = np.where(freedom > 0, np.maximum(1.0, chi_squared / np.maximum(freedom, 1)), 1.0)
     own_variance = np.maximum(variance * scale - shared_variance, 0.0)
     theta = np.where(some, 10.0**mean, np.nan)
@@ -243,8 +249,11 @@ def _each_relation(
         )
         colour = intrinsic[:, bluer] - intrinsic[:, redder]
         with np.errstate(invalid="ignore"):
+            latest = np.select(
+                [group == name for name in relation.luminosity], list(relation.luminosity.values()), -np.inf
+            )
             applies = (
-                np.isin(group, relation.luminosity)
+                (code <= latest)
                 & (code >= relation.spectral_min)
                 & (code <= relation.spectral_max)
                 & (colour >= relation.colour_min)

@@ -9,7 +9,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from pinlight.diameters.spectral import spectral_code
+from pinlight.diameters.spectral import LUMINOSITY_GROUPS, spectral_code
 from pinlight.errors import InputError
 from pinlight.photometry.systems import SYSTEM_BANDS
 
@@ -28,15 +28,17 @@ class Relation:
     ``direct``: log theta = P(C) - 0.2 m; ``F``: log theta = 8.4414 - 0.2 m - 2 P(C);
     ``S``: log theta = 0.2 (P(C) - m); m is the magnitude in `zero_band`.
 
-    `scatter_percent` is the relation's own scatter in theta; `shared_percent` the systematic
-    that all relations of one `sample` share, and so all stars that used them.
+    `luminosity` maps each luminosity group it holds for to the latest spectral code there, as far as
+    the paper sets one. `scatter_percent` is the relation's own scatter in theta; `shared_percent` the
+    systematic that all relations of one `sample` share, and so all stars that used them. It is ours:
+    papers rarely tell it; half the distance at which relations for the same stars disagree.
     """
 
     name: str
     sample: str
     reference: str
     doi: str
-    luminosity: tuple[str, ...]
+    luminosity: dict[str, float]
     spectral_min: float
     spectral_max: float
     form: str
@@ -79,6 +81,17 @@ class RelationSet:
         return tuple(relation.name for relation in self.relations)
 
 
+def _groups(text: str) -> dict[str, float]:
+    """Luminosity groups, each with its latest code: ``dwarf subgiant<=K0``."""
+    groups = {}
+    for word in text.split():
+        group, _, latest = word.partition("<=")
+        if group not in LUMINOSITY_GROUPS:
+            raise InputError(f"luminosity is {group!r}; it may be one of {', '.join(LUMINOSITY_GROUPS)}")
+        groups[group] = spectral_code(latest) if latest else float("inf")
+    return groups
+
+
 def _relation(row: dict[str, str]) -> Relation:
     coefficients = [float(row[f"c{power}"] or 0) for power in range(6)]
     while len(coefficients) > 1 and coefficients[-1] == 0:
@@ -88,7 +101,7 @@ def _relation(row: dict[str, str]) -> Relation:
         sample=row["sample"],
         reference=row["reference"],
         doi=row["doi"],
-        luminosity=tuple(row["luminosity"].split()),
+        luminosity=_groups(row["luminosity"]),
         spectral_min=spectral_code(row["spectral_min"]),
         spectral_max=spectral_code(row["spectral_max"]),
         form=row["form"],

@@ -12,10 +12,13 @@ from pinlight.errors import InputError
 __all__ = ["LUMINOSITY_GROUPS", "SpectralType", "luminosity_groups", "parse_spectral_type", "spectral_code"]
 
 _LETTERS = "OBAFGKM"
-LUMINOSITY_GROUPS = ("dwarf", "giant", "supergiant")
+LUMINOSITY_GROUPS = ("dwarf", "subgiant", "giant", "supergiant")
 _TEMPERATURE = re.compile(r"([OBAFGKM])(\d(?:\.\d+)?)?")
 _LUMINOSITY = re.compile(r"(Ia\+|Iab|Ia|Ib|III|II|IV|VI|V|I)")
-_GROUP_OF = {"VI": "dwarf", "V": "dwarf", "IV": "dwarf", "III": "giant", "II": "giant"}
+_GROUP_OF = {"VI": "dwarf", "V": "dwarf", "IV": "subgiant", "III": "giant", "II": "giant"}
+# Words and elements whose letters are no marks of the lines' shape.
+_WORDS = re.compile(r"Fe|CN|Hg|Mn|mn|Ca|Cr|Eu|Si|Sr|metal\w*|weak|strong|comp\w*|var|delDel")
+_SECOND_STAR = re.compile(r"[IV]\w*:?-[OBAFGKM]\d")
 
 
 @dataclass(frozen=True)
@@ -70,32 +73,34 @@ def parse_spectral_type(text: str) -> SpectralType:
     if metallic := re.search(r"h([OBAFGKM]\d?(?:\.\d)?)", text):  # kA5hF0mF2: the hydrogen lines decide
         body = metallic[1] + text[metallic.end() :]
     body = re.sub(r"^(sd|g|d)?[:\s]*", "", body)
+    body = re.sub(r"^([OBAFGKM][\d.]*)\+(?=[IV])", r"\1", body)  # K2+V: between K2 V and K3 V
     temperature = _TEMPERATURE.search(body)
     if not temperature:
         return SpectralType(np.nan, "")
     first, plus, second = body.partition("+")
     after = first[temperature.end() :] if temperature.end() <= len(first) else ""
     luminosity = _LUMINOSITY.search(after)
+    marks = _WORDS.sub("", after)
     return SpectralType(
         code=10.0 * _LETTERS.index(temperature[1]) + float(temperature[2] or 5),
         luminosity="VI" if text.startswith("sd") else (luminosity[1] if luminosity else ""),
-        composite=bool(plus) and bool(re.match(r"[OBAFGKMD.]", second)),
-        broad_lined=bool(re.search(r"n", re.sub(r"C[Nn]|[a-z]*in", "", after))),
-        emission="e" in re.sub(r"Fe", "", after),
-        peculiar=bool(metallic) or bool(re.search(r"p|m(?!$)|m$|s$|sh", re.sub(r"comp", "", after))),
+        composite=bool(plus and re.match(r"\s*[OBAFGKMDWCS.]", second)) or bool(_SECOND_STAR.search(body)),
+        broad_lined="n" in marks,
+        emission="e" in marks,
+        peculiar=bool(metallic) or bool(re.search(r"p|m|s|Hg", re.sub(r"metal\w*|comp\w*", "", after))),
     )
 
 
 def luminosity_groups(
     types: list[SpectralType], v_ks: ArrayLike, v_mag: ArrayLike, parallax_mas: ArrayLike
 ) -> NDArray[np.str_]:
-    """Dwarf, giant or supergiant for each star, '' where nothing applies, shape (N,).
+    """Dwarf, subgiant, giant or supergiant for each star, '' where nothing applies, shape (N,).
 
     From the luminosity class; where the type has none, from absolute brightness and colour: a
     star redder than V - Ks = 1.6 is a giant when its absolute Ks magnitude is below 1.3, which
     lies between the brightest subgiants and the faintest red giants; a bluer one when it is
-    below -1 (common practice, no source). Subgiants count as dwarfs, bright giants as giants,
-    as the relations do.
+    below -1 (common practice, no source). Bright giants count as giants. `v_ks` and `v_mag` are
+    dereddened.
     """
     v_ks, v_mag, parallax = (np.asarray(value, float) for value in (v_ks, v_mag, parallax_mas))
     with np.errstate(invalid="ignore", divide="ignore"):

@@ -1,8 +1,9 @@
 """The command line: read the options, make one call, show the answer."""
 
 import json
-import math
+import signal
 import sys
+import threading
 from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -18,24 +19,29 @@ if TYPE_CHECKING:
 
 __all__ = ["main"]
 
-_SHORT = {"diameter": "diam.", "brightness": "bright.", "companion": "comp."}
-# The flags that a reader of a ranking wants to see beside a star that passed the gates.
-_REMARKS = ("component", "variable", "fast_rotator", "peculiar")
-
 # Heavy libraries are imported inside the commands: 'pinlight --help' has to answer at once.
 
 
 class _Group(click.Group):
-    """Turns the library's errors into one line and an exit code: 2 for bad input, 1 for the rest."""
+    """Turns every error into one line and an exit code: 2 for bad input, 1 for the rest."""
 
     def invoke(self, context: click.Context) -> Any:
+        # A polite end: what is half made is put away, as for Ctrl-C.
+        if threading.current_thread() is threading.main_thread():
+            signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))
         try:
             return super().invoke(context)
         except PinlightError as error:
             click.echo(f"pinlight: {error}", err=True)
             context.exit(2 if isinstance(error, InputError | NotFoundError) else 1)
+        except click.UsageError as error:
+            click.echo(f"pinlight: {' '.join(error.format_message().split())}", err=True)
+            context.exit(2)
         except BrokenPipeError:
             sys.stderr.close()
+            context.exit(1)
+        except OSError as error:
+            click.echo(f"pinlight: cannot write the answer: {error.strerror}", err=True)
             context.exit(1)
 
 
@@ -49,14 +55,17 @@ def _as_json(function: Callable[..., Any]) -> Callable[..., Any]:
     return click.option("--json", "as_json", is_flag=True, help="Print JSON.")(function)
 
 
+def _span(function: Callable[..., Any]) -> Callable[..., Any]:
+    function = click.option("--to", metavar="UTC", help="End of the span.")(function)
+    function = click.option("--from", "from_", metavar="UTC", help="Begin of a span, in place of a night.")(
+        function
+    )
+    night_help = "The dark hours after that date's noon at the array."
+    return click.option("--night", metavar="YYYY-MM-DD", help=night_help)(function)
+
+
 def _print_json(answer: Any) -> None:
     click.echo(json.dumps(answer, indent=1, ensure_ascii=False, allow_nan=False))
-
-
-def _console() -> Any:
-    from rich.console import Console
-
-    return Console(width=None if sys.stdout.isatty() else 140, highlight=False)
 
 
 def _say(step: str) -> None:
@@ -104,22 +113,30 @@ def init(db: str | None, empty: bool) -> None:
 @click.option("--judge", default="rms", show_default=True, help="rms or worst, over baselines and channels.")
 @click.option("--best", default=20, show_default=True, help="How many to list.")
 @click.option("--edition", help="An older edition of the catalogue.")
+@_span
+@click.option("--at", metavar="UTC", help="One time, in place of a night.")
+@click.option("--with", "with_", metavar="NAME,NAME", help="A set of stars to evaluate beside the best ones.")
 @_as_json
-def rank(target: str, db: str | None, as_json: bool, stations: str | None, **options: Any) -> None:
+def rank(
+    target: str, db: str | None, as_json: bool, stations: str | None, with_: str | None, **options: Any
+) -> None:
     """Rank calibrators for TARGET: a star's name, coordinates, or a CSV file of targets."""
     from pinlight.catalogue.store import open_catalogue
+    from pinlight.faces.library import is_file, read_targets
     from pinlight.faces.library import rank as rank_target
-    from pinlight.faces.library import read_targets
 
     catalogue = open_catalogue(db)
-    in_file = Path(target).suffix.lower() == ".csv" or Path(target).is_file()
+    in_file = target.lower().endswith(".csv") or is_file(target)
     targets = read_targets(Path(target)) if in_file else [target]
-    rankings = [rank_target(catalogue, one, stations=_names(stations), **options) for one in targets]
+    options |= {"stations": _names(stations), "with_": _names(with_)}
+    rankings = [rank_target(catalogue, one, **options) for one in targets]
     if as_json:
         _print_json(_several(rankings) if in_file else rankings[0].to_dict())
     else:
+        from pinlight.faces.show import show_ranking
+
         for ranking in rankings:
-            _show_ranking(ranking)
+            show_ranking(ranking)
 
 
 def _several(rankings: "list[Ranking]") -> dict[str, Any]:
@@ -128,49 +145,6 @@ def _several(rankings: "list[Ranking]") -> dict[str, Any]:
         "pinlight": __version__,
         "rankings": [ranking.to_dict() for ranking in rankings],
     }
-
-
-def _show_ranking(ranking: "Ranking", most: int | None = None) -> None:
-    from rich.table import Table
-
-    from pinlight.ranking.budget import TERMS
-
-    console, setup = _console(), ranking.setup
-    with_what = f"{setup.array_name}, {setup.mode.name}" if setup.mode else "one baseline"
-    longest = f"baselines to {setup.baselines_m.max():.0f} m, {setup.wavelength_um:g} um"
-    console.print(f"\n[bold]{ranking.target.name or 'Target'}[/bold]  {with_what}, {longest}")
-    # Every term has its column where there is room; on a narrow screen only the largest is named.
-    wide = console.width >= 130
-    table = Table(box=None, pad_edge=False, header_style="dim")
-    term_headings = [*(_SHORT.get(name, name) for name in TERMS), "V2 min"] if wide else ["mostly"]
-    headings = ["", "star", "error %", *term_headings, "sep deg", "type", setup.band, "diameter mas"]
-    for heading in headings:
-        left = heading in ("star", "type", "mostly")
-        bold = "bold" if heading == "error %" else ""
-        table.add_column(heading, justify="left" if left else "right", style=bold, no_wrap=True)
-    table.add_column("remarks" if wide else "", style="dim", no_wrap=True, max_width=18 if wide else 1)
-    for star in ranking.calibrators[:most]:
-        total_mas = math.hypot(star.own_error_mas, star.shared_error_mas)
-        terms = {name: term for name, term in star.budget.items() if term is not None}
-        shown = (
-            [f"{100 * terms[name]:.2f}" if name in terms else "–" for name in TERMS] + [f"{star.v2_min:.2f}"]
-            if wide
-            else [max(terms, key=lambda name: terms[name])]
-        )
-        remarks = ", ".join(flag for flag in star.flags if flag in _REMARKS).replace("_", " ")
-        table.add_row(
-            str(star.rank), star.name, f"{100 * star.calibration_error:.2f}", *shown,
-            f"{star.separation_deg:.1f}", star.spectral_type, f"{star.magnitudes[setup.band][0]:.2f}",
-            f"{star.limb_darkened_mas:.3f} ± {total_mas:.3f}", remarks if wide else "*" if remarks else "",
-        )  # fmt: skip
-    if ranking.calibrators:
-        console.print(table)
-    else:
-        console.print("No star passes every gate.")
-    counts = [f"{count} {reason.replace('_', ' ')}" for reason, count in ranking.excluded.items()]
-    console.print(f"[dim]{ranking.ranked} stars rank. Left out: {', '.join(counts) or 'none'}.[/dim]")
-    for note in ranking.notes:
-        console.print(f"[dim]{note}[/dim]")
 
 
 @main.command()
@@ -186,56 +160,9 @@ def star(name: str, db: str | None, as_json: bool) -> None:
     if as_json:
         _print_json(facts)
     else:
-        _show_star(facts)
+        from pinlight.faces.show import show_star
 
-
-def _show_star(facts: dict[str, Any]) -> None:
-    from rich.table import Table
-
-    console = _console()
-    also = ", ".join(facts["identifiers"][1:])
-    console.print(f"\n[bold]{facts['name']}[/bold]  {facts['spectral_type'] or 'no spectral type'}   {also}")
-    console.print(f"ra {facts['ra_deg']:.6f}  dec {facts['dec_deg']:+.6f} deg (ICRS, epoch 2000)")
-    motion = (facts["pm_ra_mas_yr"], facts["pm_dec_mas_yr"], facts["parallax_mas"])
-    written = ["–" if value is None else f"{value:g}" for value in motion]
-    console.print(f"proper motion {written[0]}, {written[1]} mas/yr, parallax {written[2]} mas")
-    console.print(f"flags: {', '.join(facts['flags']) or 'none'}; standing: {facts['standing'] or 'none'}")
-    for near in facts["companions"]:
-        console.print(f"neighbour {near['name']} at {near['separation_arcsec']:.1f} arcsec")
-    mags = [
-        f"{band} {entry['value']:.3f} ± {entry['error']:.3f}" + ("*" if entry["error_assumed"] else "")
-        for band, entry in facts["magnitudes"].items()
-    ]
-    console.print("  ".join(mags))
-    if any(entry["error_assumed"] for entry in facts["magnitudes"].values()):
-        console.print("[dim]* the source gives no error; this is the band's default[/dim]")
-    diameter = facts["diameter"]
-    if diameter is None:
-        console.print("No published relation applies to its type and colours: no diameter.")
-        return
-    console.print()
-    _show_diameter(console, diameter)
-    console.print(
-        f"as a {diameter['luminosity_group']}, Teff {diameter['teff_k']:.0f} K, log g {diameter['logg']:.1f},"
-        f" A_V {diameter['av_mag']:.2f} ± {diameter['av_error_mag']:.2f};"
-        f" chi2 {diameter['chi_squared']:.1f} on {diameter['degrees_of_freedom']}"
-    )
-    if diameter["discordant"]:
-        console.print(f"[bold]discordant[/bold]: {diameter['culprit']} disagrees most")
-    table = Table(box=None, pad_edge=False, header_style="dim")
-    for heading in ("relation", "diameter mas", "weight", "pull"):
-        table.add_column(heading, justify="left" if heading == "relation" else "right")
-    for part in diameter["relations"]:
-        pull = "–" if part["pull"] is None else f"{part['pull']:+.2f}"
-        table.add_row(part["relation"], f"{part['diameter_mas']:.4f}", f"{part['weight']:+.3f}", pull)
-    console.print(table)
-
-
-def _show_diameter(console: Any, found: dict[str, Any]) -> None:
-    console.print(
-        f"limb-darkened diameter [bold]{found['limb_darkened_mas']:.4f} ± {found['error_mas']:.4f} mas[/bold]"
-        f"  (own {found['own_error_mas']:.4f}, shared {found['shared_error_mas']:.4f})"
-    )
+        show_star(facts)
 
 
 def _magnitude_options(function: Callable[..., Any]) -> Callable[..., Any]:
@@ -283,14 +210,9 @@ def diameter(
     if as_json:
         _print_json(answer)
         return
-    result, console = answer["diameter"], _console()
-    _show_diameter(console, result)
-    console.print(f"uniform-disc diameter in {band}: {result['uniform_disk_mas']:.4f} mas")
-    console.print(f"as a {answer['luminosity_group']}, Teff {answer['teff_k']} K, A_V {answer['av_mag']:.2f}")
-    if result["discordant"]:
-        console.print("[bold]discordant[/bold]: its colours disagree about its diameter")
-    for part in answer["parts"]:
-        console.print(f"  {part['relation']:<14}{part['diameter_mas']:8.4f} mas   weight {part['weight']:+.3f}")
+    from pinlight.faces.show import show_diameter
+
+    show_diameter(answer)
 
 
 @main.group()
@@ -328,6 +250,107 @@ def check(file: str, as_json: bool) -> None:
         click.echo(f"  mode {mode.name}: {band}, resolves {resolved_mas:.2f} mas")
 
 
+@array.command("import")
+@click.argument("file", type=click.Path(path_type=Path))
+@click.option(
+    "--output", type=click.Path(path_type=Path), help="Write the array file here; printed by default."
+)
+def import_(file: Path, output: Path | None) -> None:
+    """Make an array file from the OI_ARRAY table of an OIFITS FILE; blanks are marked "?"."""
+    from pinlight.arrays.oifits import array_file_from_oifits
+
+    text = array_file_from_oifits(file)
+    if output is None:
+        click.echo(text, nl=False)
+    else:
+        _write(output, text)
+
+
+@array.command()
+@click.argument("array_file", metavar="ARRAY")
+@click.argument("target")
+@_db
+@click.option("--stations", metavar="A,B,…", help="Stations to use; all by default.")
+@_span
+@click.option("--step-min", default=10.0, show_default=True, help="Minutes between times.")
+@_as_json
+def track(
+    array_file: str, target: str, db: str | None, stations: str | None, as_json: bool, **options: Any
+) -> None:
+    """Where TARGET stands over ARRAY, its baselines, and when it is in reach."""
+    from pinlight.catalogue.store import open_catalogue
+    from pinlight.faces.library import track_target
+    from pinlight.sky.positions import looks_like_coordinates
+
+    catalogue = None if looks_like_coordinates(target) else open_catalogue(db)
+    answer = track_target(catalogue, target, array_file, stations=_names(stations), **options)
+    if as_json:
+        _print_json(answer)
+    else:
+        from pinlight.faces.show import show_track
+
+        show_track(answer)
+
+
+@main.command()
+@click.argument("targets", type=click.Path(path_type=Path))
+@_db
+@click.option("--array", metavar="FILE|NAME", required=True, help="An array file, or north or south.")
+@click.option("--stations", metavar="A,B,…", help="Stations to use; all by default.")
+@click.option("--mode", help="The camera's mode.")
+@_span
+@click.option("--edition", help="An older edition of the catalogue.")
+@click.option("--time-limit-s", default=5.0, show_default=True, help="For placing the blocks.")
+@click.option("--csv", "csv_file", type=click.Path(path_type=Path), help="Write one line a look here.")
+@click.option("--ics", "ics_file", type=click.Path(path_type=Path), help="Write an iCalendar here.")
+@click.option("--report", "report_file", type=click.Path(path_type=Path), help="Write a printable page here.")
+@_as_json
+def plan(
+    targets: Path,
+    db: str | None,
+    stations: str | None,
+    csv_file: Path | None,
+    ics_file: Path | None,
+    report_file: Path | None,
+    as_json: bool,
+    **options: Any,
+) -> None:
+    """Plan a night for the TARGETS of a CSV file."""
+    from pinlight.catalogue.store import open_catalogue
+    from pinlight.faces.library import plan_night, read_requests
+
+    requests = read_requests(targets)
+    night = plan_night(open_catalogue(db), requests, stations=_names(stations), **options)
+    if csv_file or ics_file or report_file:
+        from pinlight.faces import papers
+
+        for path, made in (
+            (csv_file, papers.plan_csv),
+            (ics_file, papers.plan_ics),
+            (report_file, papers.plan_page),
+        ):
+            if path is not None:
+                _write(path, made(night))
+    if as_json:
+        _print_json(night.to_dict())
+    else:
+        from pinlight.faces.show import show_plan
+
+        show_plan(night)
+
+
+def _write(path: Path, text: str) -> None:
+    """Write a file whole or not at all."""
+    aside = path.with_name(f".{path.name}.unfinished")
+    try:
+        aside.write_text(text, encoding="utf-8", newline="")
+        aside.replace(path)
+    except OSError as error:
+        aside.unlink(missing_ok=True)
+        raise PinlightError(f"cannot write {path}: {error.strerror}") from error
+    click.echo(f"wrote {path}", err=True)
+
+
 @main.command()
 @_db
 @click.option("--host", default="127.0.0.1", show_default=True)
@@ -351,8 +374,8 @@ def _serve(catalogue: "Catalogue", host: str, port: int, arrays: Path | None, op
     app = create_app(catalogue, arrays)
     try:
         server = waitress.create_server(app, host=host, port=port, threads=8, ident="pinlight")
-    except OSError as error:
-        reason = f"cannot serve on {host} port {port}: {error.strerror}"
+    except (OSError, ValueError) as error:
+        reason = f"cannot serve on {host} port {port}: {getattr(error, 'strerror', None) or error}"
         raise InputError(f"{reason}; choose another --port") from error
     click.echo(f"Pinlight is at http://{'[::1]' if host == '::1' else host}:{port}/ – Ctrl-C ends it", err=True)
     server.run()
@@ -380,7 +403,9 @@ def demo(db: str | None, once: bool, port: int, as_json: bool) -> None:
     if as_json:
         _print_json(_several(rankings))
     else:
+        from pinlight.faces.show import show_ranking
+
         for ranking in rankings:
-            _show_ranking(ranking, most=5)
+            show_ranking(ranking, most=5)
     if not once:
         _serve(catalogue, "127.0.0.1", port, None, False)

@@ -13,10 +13,18 @@ from pinlight.arrays.geometry import baselines
 from pinlight.catalogue.store import Catalogue
 from pinlight.errors import CatalogueError, InputError, NotFoundError, PinlightError
 from pinlight.faces.library import known_arrays
-from pinlight.faces.models import RankingQuestion, StarsQuestion
+from pinlight.faces.models import PlanQuestion, RankingQuestion, StarsQuestion
 from pinlight.faces.openapi import describe_api
 from pinlight.faces.page import page
-from pinlight.faces.service import Service, answer_ranking, from_query, read_question, service
+from pinlight.faces.service import (
+    Service,
+    answer_plan,
+    answer_ranking,
+    from_query,
+    posted_json,
+    read_question,
+    service,
+)
 from pinlight.ranking.columns import StarColumns, flag_words
 from pinlight.sky.positions import check_position
 from pinlight.version import __version__
@@ -97,7 +105,12 @@ def rankings() -> dict[str, Any]:
 
 @api.post("/rankings")
 def rankings_posted() -> dict[str, Any]:
-    return answer_ranking(read_question(RankingQuestion, request.get_json())).to_dict()
+    return answer_ranking(read_question(RankingQuestion, posted_json())).to_dict()
+
+
+@api.post("/plans")
+def plans() -> dict[str, Any]:
+    return answer_plan(read_question(PlanQuestion, posted_json())).to_dict()
 
 
 @api.get("/stars")

@@ -13,13 +13,17 @@ from pinlight.diameters.limb_darkening import coefficients_at, uniform_disk_rati
 from pinlight.diameters.prediction import StarPhotometry, predict_diameters
 from pinlight.diameters.relations import load_relations
 from pinlight.errors import InputError, NotFoundError
-from pinlight.photometry.bands import BANDS, check_magnitude, default_errors
+from pinlight.photometry.bands import BANDS, check_magnitude, default_errors, saturation_errors
 from pinlight.photometry.bands import band as band_of
 from pinlight.photometry.systems import CATALOGUE_BANDS
+from pinlight.planning.night import NightPlan, Request
+from pinlight.planning.night import plan_night as plan_columns
+from pinlight.ranking.clock import Clock, night_clock, span_clock
 from pinlight.ranking.rank import rank as rank_columns
-from pinlight.ranking.result import Ranking
+from pinlight.ranking.result import CalibratorSet, Ranking
 from pinlight.ranking.setup import Setup, quick_setup, setup_of
 from pinlight.ranking.target import Target
+from pinlight.ranking.track import track
 from pinlight.resources import seed_folder
 from pinlight.sky.positions import (
     check_position,
@@ -27,17 +31,27 @@ from pinlight.sky.positions import (
     looks_like_coordinates,
     parse_coordinates,
 )
+from pinlight.sky.time import parse_utc
 
 __all__ = [
+    "best_set",
     "find_array",
+    "is_file",
     "known_arrays",
+    "make_clock",
     "make_setup",
     "named_array",
+    "plan_night",
     "predict_diameter",
     "rank",
+    "read_requests",
     "read_targets",
     "resolve_target",
+    "track_target",
 ]
+
+# Steps of a ranking's clock; windows are found finer.
+_RANK_STEP_MIN = 10.0
 
 
 def rank(
@@ -45,7 +59,7 @@ def rank(
     target: str | Target,
     *,
     array: str | Path | Array | None = None,
-    stations: list[str] | None = None,
+    stations: list[str] | str | None = None,
     mode: str | None = None,
     baseline_m: float | None = None,
     wavelength_um: float | None = None,
@@ -55,6 +69,11 @@ def rank(
     judge: str = "rms",
     best: int = 20,
     edition: str | None = None,
+    night: str | None = None,
+    at: str | None = None,
+    from_: str | None = None,
+    to: str | None = None,
+    with_: list[str] | None = None,
 ) -> Ranking:
     """Rank calibrators for a target, with an array or just a baseline and a wavelength.
 
@@ -75,6 +94,13 @@ def rank(
         How many to list.
     edition : str, optional
         The newest by default.
+    night : str, optional
+        Date of an evening at the array: its dark hours. Stars then have to be in reach together
+        with the target, and baselines are the projected ones.
+    at, from_, to : str, optional
+        One time, or the beginning and end of a span, in UTC; in place of `night`.
+    with_ : list of str, optional
+        Names of stars whose set is evaluated beside the best sets.
 
     Returns
     -------
@@ -88,6 +114,11 @@ def rank(
         If the catalogue cannot be read.
     """
     setup = make_setup(array, stations, mode, baseline_m, wavelength_um)
+    if array is None and (timed := night or at or from_ or to):
+        raise InputError(f"a time, {timed}, is given without an array; give the array too")
+    clock = None
+    if array is not None:
+        clock = make_clock(_array(array), stations, night, at, from_, to, _RANK_STEP_MIN)
     return rank_columns(
         catalogue.columns(edition),
         resolve_target(catalogue, target),
@@ -96,12 +127,140 @@ def rank(
         judge=judge,
         best=best,
         standings=catalogue.standings(),
+        clock=clock,
+        with_ids=[catalogue.find(name) for name in with_ or ()],
+    )
+
+
+def best_set(catalogue: Catalogue, target: str | Target, size: int = 2, **options: Any) -> CalibratorSet:
+    """The set of calibrators of one size that costs a target least.
+
+    Parameters
+    ----------
+    catalogue, target
+        As `rank` takes them, and so all other options.
+    size : int
+        1 to 4.
+
+    Raises
+    ------
+    InputError, NotFoundError
+        As `rank`; also where fewer stars than `size` pass every gate.
+    """
+    sets = {len(one.star_ids): one for one in rank(catalogue, target, **options).best_sets}
+    if size not in sets:
+        raise InputError(
+            f"size is {size}; it may be one of {', '.join(map(str, sets)) or 'none: no star ranks'}"
+        )
+    return sets[size]
+
+
+def _array(array: str | Path | Array) -> Array:
+    return array if isinstance(array, Array) else find_array(array)
+
+
+def _stations(names: list[str] | str | None) -> list[str] | None:
+    """A list of stations, also from one text with commas."""
+    return [name.strip() for name in names.split(",") if name.strip()] if isinstance(names, str) else names
+
+
+def make_clock(
+    array: Array,
+    stations: list[str] | str | None,
+    night: str | None,
+    at: str | None,
+    from_: str | None,
+    to: str | None,
+    step_min: float = 5.0,
+) -> Clock | None:
+    """The clock of a night, a moment or a span; None where no time is given.
+
+    Raises
+    ------
+    InputError
+        If more than one is given, or a span lacks an end.
+    """
+    given = [name for name, value in (("night", night), ("at", at), ("from", from_ or to)) if value is not None]
+    if len(given) > 1:
+        raise InputError(f"{' and '.join(given)} are both given; give a night, a time, or from and to")
+    chosen = array.choose_stations(_stations(stations))
+    if night is not None:
+        return night_clock(array, chosen, night, step_min)
+    if at is not None:
+        return span_clock(array, chosen, at, at, step_min)
+    if from_ is not None or to is not None:
+        if from_ is None or to is None:
+            raise InputError(f"{'from' if from_ is None else 'to'} is missing; give both, or a night")
+        return span_clock(array, chosen, from_, to, step_min)
+    return None
+
+
+def track_target(
+    catalogue: Catalogue | None,
+    target: str | Target,
+    array: str | Path | Array,
+    *,
+    stations: list[str] | str | None = None,
+    night: str | None = None,
+    from_: str | None = None,
+    to: str | None = None,
+    step_min: float = 10.0,
+) -> dict[str, Any]:
+    """Where a target stands over an array, ready for JSON; see `ranking.track.track`.
+
+    Coordinates need no catalogue.
+    """
+    clock = make_clock(_array(array), stations, night, None, from_, to, step_min)
+    if clock is None:
+        raise InputError("from is missing; give from and to, or a night")
+    return track(clock, resolve_target(catalogue, target))
+
+
+def plan_night(
+    catalogue: Catalogue,
+    requests: list[Request],
+    *,
+    array: str | Path | Array,
+    stations: list[str] | str | None = None,
+    mode: str | None = None,
+    night: str | None = None,
+    from_: str | None = None,
+    to: str | None = None,
+    edition: str | None = None,
+    time_limit_s: float = 5.0,
+) -> NightPlan:
+    """A night of blocks for many targets; see `planning.night`.
+
+    Parameters
+    ----------
+    catalogue : Catalogue
+    requests : list of Request
+        Of `read_requests`, or your own.
+    array, stations, mode
+        As `rank` takes them.
+    night, from_, to : str, optional
+        The evening's date at the array, or a span of UTC.
+    edition : str, optional
+    time_limit_s : float
+        For the solver.
+    """
+    found = _array(array)
+    clock = make_clock(found, stations, night, None, from_, to)
+    if clock is None:
+        raise InputError("night is missing; write the date of its evening, such as 2026-12-01")
+    return plan_columns(
+        catalogue.columns(edition),
+        requests,
+        setup_of(found, _stations(stations), mode),
+        clock,
+        standings=catalogue.standings(),
+        time_limit_s=time_limit_s,
     )
 
 
 def make_setup(
     array: str | Path | Array | None,
-    stations: list[str] | None,
+    stations: list[str] | str | None,
     mode: str | None,
     baseline_m: float | None,
     wavelength_um: float | None,
@@ -118,8 +277,7 @@ def make_setup(
     if array is not None:
         if given:
             raise InputError(f"array and {given[0]} are both given; give one or the other")
-        found = array if isinstance(array, Array) else find_array(array)
-        return setup_of(found, stations, mode)
+        return setup_of(_array(array), _stations(stations), mode)
     for name, value in (("stations", stations), ("mode", mode)):
         if value is not None:
             raise InputError(f"{name} is given without an array; give the array too")
@@ -160,12 +318,20 @@ def find_array(name: str | Path) -> Array:
     InputError
         If the file is wrong.
     """
-    if isinstance(name, Path) or Path(name).suffix == ".toml" or Path(name).is_file():
+    if isinstance(name, Path) or Path(name).suffix == ".toml" or is_file(str(name)):
         return load_array(name)
     return named_array(name, known_arrays())
 
 
-def resolve_target(catalogue: Catalogue, target: str | Target) -> Target:
+def is_file(name: str) -> bool:
+    """Whether a text names a file; one too long to be a file name does not."""
+    try:
+        return Path(name).is_file()
+    except (OSError, ValueError):
+        return False
+
+
+def resolve_target(catalogue: Catalogue | None, target: str | Target) -> Target:
     """A target from what a person wrote: coordinates, or a name known to the catalogue.
 
     Raises
@@ -178,6 +344,8 @@ def resolve_target(catalogue: Catalogue, target: str | Target) -> Target:
     if looks_like_coordinates(target):
         ra_deg, dec_deg = parse_coordinates(target)
         return Target(ra_deg, dec_deg, name=target.strip())
+    if catalogue is None:
+        raise InputError(f"target is {target!r}; without a catalogue give coordinates")
     star = catalogue.star(catalogue.find(target))
     return Target(
         star["ra_deg"],
@@ -199,40 +367,92 @@ def read_targets(path: Path) -> list[Target]:
     InputError
         If the file cannot be read or a row is wrong; the message names the line.
     """
+    return [request.target for request in read_requests(path)]
+
+
+def read_requests(path: Path) -> list[Request]:
+    """Targets with what a plan wants of each: columns priority, repeats, required_error_percent, from, to.
+
+    All of these may be missing or blank: priority 1, one block, any error, any time of the night.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read or a row is wrong; the message names the line.
+    """
+    requests = []
     try:
         with path.open(encoding="utf-8-sig", newline="") as file:
-            rows = list(csv.DictReader(file))
+            reader = csv.reader(file)
+            columns = _targets_columns(path, next(reader, []))
+            for cells in reader:
+                if not any(cell.strip() for cell in cells):
+                    continue
+                row = {column: cell.strip() for column, cell in zip(columns, cells, strict=False)}
+                try:
+                    requests.append(_request(row))
+                except InputError as error:
+                    raise InputError(f"{path} line {reader.line_num}: {error}") from error
     except (OSError, UnicodeDecodeError, csv.Error) as error:
         reason = error.strerror if isinstance(error, OSError) else error
         raise InputError(f"cannot read targets file {path}: {reason}") from error
-    if not rows:
+    if not requests:
         raise InputError(f"targets file {path} has no rows; it needs columns name, ra_deg, dec_deg")
-    targets = []
-    for line, row in enumerate(rows, start=2):
-        for column in ("name", "ra_deg", "dec_deg"):
-            if not (row.get(column) or "").strip():
-                raise InputError(f"{path} line {line}: {column} is missing")
-        values: dict[str, float] = {}
-        for column in ("ra_deg", "dec_deg", "diameter_mas", *BANDS):
-            if written := (row.get(column) or "").strip():
-                try:
-                    values[column] = float(written)
-                except ValueError as error:
-                    message = f"{path} line {line}: {column} is {written!r}; it must be a number"
-                    raise InputError(message) from error
-        try:
-            targets.append(
-                Target(
-                    values["ra_deg"],
-                    values["dec_deg"],
-                    name=row["name"].strip(),
-                    magnitudes={band: values[band] for band in BANDS if band in values},
-                    diameter_mas=values.get("diameter_mas"),
-                )
-            )
-        except InputError as error:
-            raise InputError(f"{path} line {line}: {error}") from error
-    return targets
+    return requests
+
+
+def _targets_columns(path: Path, header: list[str]) -> list[str]:
+    """The columns of a targets file, as this project spells them, whatever their case."""
+    spelled = {name.casefold(): name for name in _TARGET_COLUMNS}
+    columns = [spelled.get(cell.strip().casefold(), cell.strip()) for cell in header]
+    missing = [name for name in ("name", "ra_deg", "dec_deg") if name not in columns]
+    if missing:
+        found = ", ".join(header)[:80] or "none"
+        lacking = f"{', '.join(missing)} missing (commas part them)"
+        raise InputError(f"targets file {path} has columns {found}; {lacking}")
+    for name in columns:
+        if name and columns.count(name) > 1:
+            raise InputError(f"targets file {path} has the column {name} twice")
+    return columns
+
+
+_TARGET_COLUMNS = (
+    "name", "ra_deg", "dec_deg", "diameter_mas", *BANDS, "priority", "repeats", "required_error_percent",
+    "from", "to",
+)  # fmt: skip
+
+
+def _request(written: dict[str, str]) -> Request:
+    for column in ("name", "ra_deg", "dec_deg"):
+        if not written.get(column):
+            raise InputError(f"{column} is missing")
+    values: dict[str, float] = {}
+    numbers = ("ra_deg", "dec_deg", "diameter_mas", *BANDS, "priority", "repeats", "required_error_percent")
+    for column in numbers:
+        if text := written.get(column):
+            try:
+                values[column] = float(text)
+            except ValueError as error:
+                raise InputError(f"{column} is {text!r}; it must be a number") from error
+    repeats = values.get("repeats", 1.0)
+    if not repeats.is_integer():
+        raise InputError(f"repeats is {repeats:g}; it must be a whole number")
+    required = values.get("required_error_percent")
+    target = Target(
+        values["ra_deg"],
+        values["dec_deg"],
+        name=written["name"],
+        magnitudes={band: values[band] for band in BANDS if band in values},
+        diameter_mas=values.get("diameter_mas"),
+    )
+    return Request(
+        target,
+        priority=values.get("priority", 1.0),
+        repeats=int(repeats),
+        required_error=None if required is None else required / 100,
+        earliest=parse_utc(written["from"], "from") if written.get("from") else None,
+        latest=parse_utc(written["to"], "to") if written.get("to") else None,
+    )
 
 
 def predict_diameter(
@@ -287,12 +507,17 @@ def predict_diameter(
     latitude = 90.0 if position_deg is None else float(galactic_latitude_deg(*check_position(*position_deg)))
     values = np.array([[magnitudes.get(key, np.nan) for key in CATALOGUE_BANDS]])
     assumed = np.stack([default_errors(key, values[:, i]) for i, key in enumerate(CATALOGUE_BANDS)], axis=1)
+    saturated = np.stack(
+        [saturation_errors(key, values[:, i]) for i, key in enumerate(CATALOGUE_BANDS)], axis=1
+    )
     own = np.array([[errors.get(key, np.nan) for key in CATALOGUE_BANDS]])
     relation_set = load_relations()
     result = predict_diameters(
         StarPhotometry(
             magnitudes=values,
             errors=np.where(np.isfinite(own), own, assumed),
+            # An error of one's own says that the photometry is not the saturated survey's.
+            shared_errors=np.where(np.isfinite(own), 0.0, saturated),
             spectral_types=[spectral_type],
             parallax_mas=np.array([np.nan if parallax_mas is None else parallax_mas]),
             galactic_latitude_deg=np.array([latitude]),

@@ -2,11 +2,13 @@
 
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Discriminator, Field, Tag
 
 __all__ = [
     "ArraysAnswer",
     "HealthAnswer",
+    "PlanAnswer",
+    "PlanQuestion",
     "Problem",
     "RankingAnswer",
     "RankingQuestion",
@@ -29,6 +31,9 @@ def _split(value: Any) -> Any:
     return [name.strip() for name in value.split(",") if name.strip()] if isinstance(value, str) else value
 
 
+NameOrPlace = Annotated[str, Field(max_length=200, description="A star's name, or coordinates.")]
+
+
 class TargetQuestion(_Question):
     """A target of the caller's own; ICRS, epoch 2000."""
 
@@ -39,10 +44,19 @@ class TargetQuestion(_Question):
     diameter_mas: float | None = None
 
 
+def _kind_of_target(value: Any) -> str:
+    return "own-target" if isinstance(value, dict | TargetQuestion) else "named-target"
+
+
 class RankingQuestion(_Question):
     """Parameters of a ranking; an array, or a baseline and a wavelength."""
 
-    target: Annotated[str, Field(description="A star's name, or coordinates.")] | TargetQuestion
+    target: Annotated[
+        Annotated[NameOrPlace, Tag("named-target")] | Annotated[TargetQuestion, Tag("own-target")],
+        Discriminator(
+            lambda value: "own-target" if isinstance(value, dict | TargetQuestion) else "named-target"
+        ),
+    ]
     array: str | None = None
     stations: Annotated[list[str] | None, BeforeValidator(_split)] = None
     mode: str | None = None
@@ -54,12 +68,41 @@ class RankingQuestion(_Question):
     judge: str = "rms"
     best: int = 20
     edition: str | None = None
+    night: Annotated[str | None, Field(description="Date of an evening at the array.")] = None
+    at: Annotated[str | None, Field(description="One time, UTC.")] = None
+    from_: Annotated[str | None, Field(alias="from", description="Begin of a span, UTC.")] = None
+    to: Annotated[str | None, Field(description="End of the span, UTC.")] = None
+    with_: Annotated[list[str] | None, BeforeValidator(_split), Field(alias="with")] = None
+
+
+class PlanTarget(TargetQuestion):
+    """A target that a night is wanted for; priority 1 counts most."""
+
+    priority: float = 1.0
+    repeats: int = 1
+    required_error_percent: float | None = None
+    from_: Annotated[str | None, Field(alias="from")] = None
+    to: str | None = None
+
+
+class PlanQuestion(_Question):
+    """Targets, an array and a night, or a span of UTC."""
+
+    targets: Annotated[list[PlanTarget], Field(min_length=1, max_length=200)]
+    array: str
+    stations: Annotated[list[str] | None, BeforeValidator(_split)] = None
+    mode: str | None = None
+    night: str | None = None
+    from_: Annotated[str | None, Field(alias="from")] = None
+    to: str | None = None
+    edition: str | None = None
+    time_limit_s: Annotated[float, Field(gt=0, le=60)] = 5.0
 
 
 class StarsQuestion(_Question):
     """By name, or around a place."""
 
-    name: str | None = None
+    name: Annotated[str | None, Field(max_length=200)] = None
     ra_deg: float | None = None
     dec_deg: float | None = None
     radius_deg: Annotated[float, Field(gt=0, le=180)] = 1.0
@@ -177,6 +220,38 @@ class SetAnswer(_Answer):
     calibration_error_percent: float | None
 
 
+class LookAnswer(Window):
+    role: Literal["calibrator", "target"]
+    name: str
+    star_id: int | None
+
+
+class BlockAnswer(Window):
+    target: str
+    coarse_paths_m: dict[str, float]
+    calibration_error_percent: float
+    looks: list[LookAnswer]
+
+
+class Unscheduled(_Answer):
+    target: str
+    reason: str
+
+
+class PlanAnswer(_Answer):
+    """Blocks in order of time, and what could not be placed and why."""
+
+    edition: str
+    pinlight: str
+    setup: SetupAnswer
+    span_utc: Window
+    blocks: list[BlockAnswer]
+    unscheduled: list[Unscheduled]
+    objective: float
+    bound: float
+    notes: list[str]
+
+
 class RankingAnswer(_Answer):
     """Calibrators of one target, best first."""
 
@@ -189,6 +264,10 @@ class RankingAnswer(_Answer):
     counts: CountsAnswer
     excluded: dict[str, int]
     best_sets: list[SetAnswer]
+    named_set: SetAnswer | None
+    span_utc: Window | None
+    target_window_utc: list[Window] | None
+    coarse_paths_m: dict[str, float] | None
     notes: list[str]
 
 

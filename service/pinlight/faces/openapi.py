@@ -8,6 +8,8 @@ from pydantic.json_schema import models_json_schema
 from pinlight.faces.models import (
     ArraysAnswer,
     HealthAnswer,
+    PlanAnswer,
+    PlanQuestion,
     Problem,
     RankingAnswer,
     RankingQuestion,
@@ -20,8 +22,8 @@ from pinlight.version import __version__
 
 __all__ = ["describe_api"]
 
-_QUESTIONS = (RankingQuestion, StarsQuestion, TargetQuestion)
-_ANSWERS = (RankingAnswer, StarsAnswer, StarAnswer, ArraysAnswer, HealthAnswer, Problem)
+_QUESTIONS = (RankingQuestion, PlanQuestion, StarsQuestion, TargetQuestion)
+_ANSWERS = (RankingAnswer, PlanAnswer, StarsAnswer, StarAnswer, ArraysAnswer, HealthAnswer, Problem)
 
 
 def _schema(model: type[BaseModel]) -> dict[str, str]:
@@ -30,11 +32,11 @@ def _schema(model: type[BaseModel]) -> dict[str, str]:
 
 def _parameters(model: type[BaseModel]) -> list[dict[str, Any]]:
     """Query parameters from a question's fields; a list is written with commas."""
-    schema = model.model_json_schema()
+    schema = model.model_json_schema(by_alias=True)
     parameters = []
     for name, described in schema["properties"].items():
         options = [option for option in described.get("anyOf", [described]) if option.get("type") != "null"]
-        chosen = {"type": "string"} if name in ("target", "stations") else options[0]
+        chosen = {"type": "string"} if name in ("target", "stations", "with") else options[0]
         parameters.append(
             {
                 "name": name,
@@ -94,6 +96,17 @@ def describe_api() -> dict[str, Any]:
                     },
                     "responses": _responses(RankingAnswer, 400, 404, 413, 415),
                 },
+            },
+            "/api/v1/plans": {
+                "post": {
+                    "operationId": "plan",
+                    "summary": "Plan a night for many targets",
+                    "requestBody": {
+                        "required": True,
+                        "content": {"application/json": {"schema": _schema(PlanQuestion)}},
+                    },
+                    "responses": _responses(PlanAnswer, 400, 404, 413, 415),
+                }
             },
             "/api/v1/stars": {
                 "get": {

@@ -6,7 +6,7 @@ from pinlight.errors import InputError, NotFoundError
 from pinlight.faces.models import RankingQuestion
 from pinlight.faces.service import answer_ranking, from_query, read_question, service
 from pinlight.ranking.budget import TERMS
-from pinlight.ranking.gates import REASONS
+from pinlight.ranking.gates import REASONS, REMARKS
 from pinlight.ranking.result import Ranking
 from pinlight.version import __version__
 
@@ -18,21 +18,24 @@ page = Blueprint("page", __name__)
 
 
 @page.get("/")
-def first_page() -> str:
+def first_page() -> tuple[str, int]:
     """The ranking of one target; every state has its address."""
     known = service()
     asked = from_query(request.args)
     setups = [(f"{key}/{mode.name}", array, mode) for key, array in known.arrays.items() for mode in array.mode]
     chosen = asked.get("setup", setups[0][0])
+    if chosen not in [name for name, _, _ in setups]:
+        raise NotFoundError(f"setup is {chosen!r}; it may be one of {', '.join(name for name, _, _ in setups)}")
     key, _, mode = chosen.partition("/")
-    ranking, problem = None, None
+    ranking, problem, status = None, None, 200
     if target := asked.get("target"):
         try:
             question = {"target": target, "array": key, "mode": mode, "best": _ROWS}
             ranking = answer_ranking(read_question(RankingQuestion, question))
         except (InputError, NotFoundError) as error:
             problem = str(error)
-    return render_template(
+            status = 404 if isinstance(error, NotFoundError) else 400
+    text = render_template(
         "page.html",
         setups=setups,
         chosen=chosen,
@@ -41,9 +44,11 @@ def first_page() -> str:
         problem=problem,
         terms=TERMS,
         reasons=REASONS,
+        remarks=REMARKS,
         version=__version__,
         bars=_bars(ranking) if ranking else [],
     )
+    return text, status
 
 
 def _bars(ranking: Ranking) -> list[list[tuple[str, float, float]]]:

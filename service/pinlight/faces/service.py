@@ -1,20 +1,32 @@
 """What the HTTP interface and the page share: the service they ask, and how questions are read."""
 
+import json
 from typing import Any, NamedTuple, TypeVar
 
-from flask import current_app
+from flask import current_app, request
 from pydantic import BaseModel, ValidationError
 from werkzeug.datastructures import MultiDict
+from werkzeug.exceptions import BadRequest
 
 from pinlight.arrays.files import Array, describe
 from pinlight.catalogue.store import Catalogue
 from pinlight.errors import InputError
-from pinlight.faces.library import named_array, rank
-from pinlight.faces.models import RankingQuestion, TargetQuestion
+from pinlight.faces.library import named_array, plan_night, rank
+from pinlight.faces.models import PlanQuestion, RankingQuestion, TargetQuestion
+from pinlight.planning.night import NightPlan, Request
 from pinlight.ranking.result import Ranking
 from pinlight.ranking.target import Target
+from pinlight.sky.time import parse_utc
 
-__all__ = ["Service", "answer_ranking", "from_query", "read_question", "service"]
+__all__ = [
+    "Service",
+    "answer_plan",
+    "answer_ranking",
+    "from_query",
+    "posted_json",
+    "read_question",
+    "service",
+]
 
 Question = TypeVar("Question", bound=BaseModel)
 
@@ -35,6 +47,10 @@ def service() -> Service:
 def read_question(model: type[Question], values: Any) -> Question:
     """The question in `values`, or an error that names what is wrong with it."""
     try:
+        json.dumps(values, ensure_ascii=False).encode()
+    except UnicodeEncodeError as error:
+        raise InputError("the question holds half a character (a lone surrogate)") from error
+    try:
         return model.model_validate(values)
     except ValidationError as error:
         raise InputError(describe(error)) from error
@@ -46,6 +62,41 @@ def from_query(values: MultiDict[str, str]) -> dict[str, str]:
         if len(values.getlist(name)) > 1:
             raise InputError(f"{name} is given {len(values.getlist(name))} times; give it once")
     return {name: value for name, value in values.items() if value.strip()}
+
+
+def posted_json() -> Any:
+    """The request's body, or an error that says what is wrong with it."""
+    try:
+        return request.get_json()
+    except BadRequest as error:
+        raise InputError("the body is not JSON") from error
+    except RecursionError as error:
+        raise InputError("the body is nested too deeply") from error
+
+
+def answer_plan(question: PlanQuestion) -> NightPlan:
+    """The night plan that a question asks for."""
+    known = service()
+    requests = []
+    for one in question.targets:
+        target = Target(**one.model_dump(include={"ra_deg", "dec_deg", "name", "magnitudes", "diameter_mas"}))
+        required = one.required_error_percent
+        requests.append(
+            Request(
+                target,
+                one.priority,
+                one.repeats,
+                None if required is None else required / 100,
+                parse_utc(one.from_, "from") if one.from_ else None,
+                parse_utc(one.to, "to") if one.to else None,
+            )
+        )
+    return plan_night(
+        known.catalogue,
+        requests,
+        array=named_array(question.array, known.arrays),
+        **question.model_dump(exclude={"targets", "array"}),
+    )
 
 
 def answer_ranking(question: RankingQuestion) -> Ranking:

@@ -148,7 +148,7 @@ def channel_average(
     Parameters
     ----------
     diameter_mas, u : array, shape (N,)
-    baselines_m : array, shape (B,)
+    baselines_m : array, shape (B,), or (N, B) where they differ between stars
     nodes_um : array, shape (C, 3)
     weights : array, shape (3,)
 
@@ -159,7 +159,7 @@ def channel_average(
     """
     theta, u = np.asarray(diameter_mas, float), np.asarray(u, float)
     x = disk_argument(
-        theta[:, None, None, None], np.asarray(baselines_m, float)[:, None, None], nodes_um[None, None]
+        theta[:, None, None, None], np.asarray(baselines_m, float)[..., None, None], nodes_um[None, None]
     )
     vis, slope = visibility_and_sensitivity(x, u[:, None, None, None])
     v2 = vis**2

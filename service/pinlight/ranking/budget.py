@@ -13,12 +13,24 @@ from pinlight.fringes.visibility import channel_average
 from pinlight.ranking.columns import StarColumns
 from pinlight.ranking.setup import Setup
 
-__all__ = ["JUDGES", "TERMS", "Budget", "companion_terms", "drift_error", "error_budget"]
+__all__ = [
+    "JUDGES",
+    "SECOND_LOBE_V2",
+    "TERMS",
+    "Budget",
+    "companion_terms",
+    "drift_error",
+    "error_budget",
+    "fixed_terms",
+    "lowest_v2",
+]
 
 Floats = NDArray[np.float64]
 
 TERMS = ("diameter", "photon", "drift", "brightness", "companion", "shape")
 JUDGES = ("rms", "worst")
+# No V^2 of a disc, limb-darkened or not, exceeds this past its first null.
+SECOND_LOBE_V2 = 0.0175
 
 
 @dataclass(frozen=True)
@@ -28,7 +40,8 @@ class Budget:
     terms : term -> shape (N,), or None where it cannot be computed
     total : shape (N,), the root sum of squares of the terms
     v2_min, v2_max : shape (N,), over baselines and channels
-    uniform_disk_limb_darkening : shape (N,), u at the setup's wavelength
+    limb_darkening : shape (N,), u at the setup's wavelength
+    slopes : shape (N, samples), d ln V^2 / d ln theta on every baseline and channel
     """
 
     terms: dict[str, Floats | None]
@@ -36,6 +49,31 @@ class Budget:
     v2_min: Floats
     v2_max: Floats
     limb_darkening: Floats
+    slopes: Floats
+
+    @classmethod
+    def joined(cls, parts: list["Budget"]) -> "Budget":
+        """Several budgets of the same setup as one."""
+
+        def column(name: str) -> Floats:
+            return np.concatenate([getattr(part, name) for part in parts])
+
+        terms: dict[str, Floats | None] = {}
+        for name in TERMS:
+            values = [term for part in parts if (term := part.terms[name]) is not None]
+            terms[name] = np.concatenate(values) if values else None
+        return cls(terms, *(column(name) for name in ("total", "v2_min", "v2_max", "limb_darkening", "slopes")))
+
+    def only(self, which: NDArray[np.int64]) -> "Budget":
+        """The same of some of the stars."""
+        return Budget(
+            {name: None if term is None else term[which] for name, term in self.terms.items()},
+            self.total[which],
+            self.v2_min[which],
+            self.v2_max[which],
+            self.limb_darkening[which],
+            self.slopes[which],
+        )
 
 
 def drift_error(
@@ -65,14 +103,61 @@ def companion_terms(stars: StarColumns, rows: NDArray[np.int64], band: str, fiel
     return np.sqrt(variance)
 
 
-def error_budget(
+def fixed_terms(
     stars: StarColumns,
     rows: NDArray[np.int64],
     separations_deg: Floats,
     setup: Setup,
     target_magnitude: float | None,
     companion: Floats,
+) -> dict[str, Floats | None]:
+    """The terms that are the same on all baselines and channels: drift, brightness, companion.
+
+    Parameters
+    ----------
+    stars : StarColumns
+    rows, separations_deg : array, shape (N,)
+        Rows with a magnitude in the setup's band, and their distance from the target.
+    setup : Setup
+    target_magnitude : float or None
+        In the setup's band; None leaves the brightness term out.
+    companion : array, shape (N,)
+        The companion term, known and suspected companions together.
+
+    Returns
+    -------
+    terms : term -> array, shape (N,), or None where it cannot be computed
+    """
+    terms: dict[str, Floats | None] = {"drift": None, "brightness": None, "companion": companion}
+    drift = setup.drift
+    if drift is not None and setup.look_interval_min is not None:
+        terms["drift"] = drift_error(
+            drift.spread, drift.time_min, drift.angle_deg, setup.look_interval_min, separations_deg
+        )
+        if target_magnitude is not None:
+            magnitude = stars.magnitudes[setup.band][rows].astype(float)
+            terms["brightness"] = drift.brightness_per_mag * np.abs(magnitude - target_magnitude)
+    return terms
+
+
+def lowest_v2(stars: StarColumns, rows: NDArray[np.int64], setup: Setup, longest_m: Floats) -> Floats:
+    """V^2 on each star's longest baseline in the channel of the shortest wavelength, shape of `rows`.
+
+    The least of all of the star's in the first lobe, and below `SECOND_LOBE_V2` past it.
+    """
+    u = coefficients_at(setup.wavelength_um, stars.limb_darkening[rows])
+    theta = stars.diameter_mas[rows].astype(float)
+    v2, _ = channel_average(theta, u, longest_m[:, None], setup.nodes_um[:1], setup.weights)
+    return v2[:, 0, 0]
+
+
+def error_budget(
+    stars: StarColumns,
+    rows: NDArray[np.int64],
+    setup: Setup,
+    fixed: dict[str, Floats | None],
     judge: str,
+    baselines_m: Floats,
 ) -> Budget:
     """The budget of the stars in `rows`.
 
@@ -81,15 +166,13 @@ def error_budget(
     stars : StarColumns
     rows : array, shape (N,)
         Rows with a diameter and a magnitude in the setup's band.
-    separations_deg : array, shape (N,)
-        From the target.
     setup : Setup
-    target_magnitude : float or None
-        In the setup's band; None leaves the brightness term out.
-    companion : array, shape (N,)
-        The companion term, known and suspected companions together.
+    fixed : term -> array, shape (N,)
+        Of `fixed_terms`.
     judge : str
         ``rms`` over baselines and channels, or ``worst``.
+    baselines_m : array, shape (N, B)
+        Projected baselines of each star.
 
     Raises
     ------
@@ -100,36 +183,22 @@ def error_budget(
         raise InputError(f"judge is {judge!r}; it may be {' or '.join(JUDGES)}")
     theta = stars.diameter_mas[rows].astype(float)
     u = coefficients_at(setup.wavelength_um, stars.limb_darkening[rows])
-    v2, slope = channel_average(theta, u, setup.baselines_m, setup.nodes_um, setup.weights)
+    averaged = channel_average(theta, u, baselines_m, setup.nodes_um, setup.weights)
+    count, samples = len(rows), baselines_m.shape[1] * len(setup.nodes_um)
+    v2, slope = (part.reshape(count, samples) for part in averaged)
     relative = np.hypot(stars.own_error_mas[rows], stars.shared_error_mas[rows]).astype(float) / theta
-    magnitude = stars.magnitudes[setup.band][rows].astype(float)
-
-    def everywhere(values: Floats) -> Floats:
-        return np.broadcast_to(values[:, None, None], v2.shape)
-
-    steepness = np.abs(slope)
-    by_sample: dict[str, Floats | None] = dict.fromkeys(TERMS)
-    by_sample["diameter"] = steepness * relative[:, None, None]
-    by_sample["shape"] = steepness * (stars.oblateness[rows].astype(float) / (2 * np.sqrt(2)))[:, None, None]
-    by_sample["companion"] = everywhere(companion)
+    squares = {
+        name: np.broadcast_to(term[:, None] ** 2, v2.shape) for name, term in fixed.items() if term is not None
+    }
+    squares["diameter"] = (slope * relative[:, None]) ** 2
+    squares["shape"] = (slope * (stars.oblateness[rows].astype(float) / (2 * np.sqrt(2)))[:, None]) ** 2
     if setup.mode is not None:
+        magnitude = stars.magnitudes[setup.band][rows].astype(float)
         counts = setup.mode.counts_per_frame_at_mag0 / setup.mode.channels * 10 ** (-0.4 * magnitude)
         frames = setup.mode.integration_s / (setup.mode.frame_ms / 1000)
-        snr = snr_of_v2(everywhere(counts), v2, setup.mode.system_v2, setup.mode.read_variance, frames)
+        snr = snr_of_v2(counts[:, None], v2, setup.mode.system_v2, setup.mode.read_variance, frames)
         with np.errstate(divide="ignore"):
-            by_sample["photon"] = 1 / snr
-    if setup.drift is not None and setup.look_interval_min is not None:
-        drift = setup.drift
-        by_sample["drift"] = everywhere(
-            drift_error(drift.spread, drift.time_min, drift.angle_deg, setup.look_interval_min, separations_deg)
-        )
-        if target_magnitude is not None:
-            by_sample["brightness"] = everywhere(
-                drift.brightness_per_mag * np.abs(magnitude - target_magnitude)
-            )
-    count, samples = len(rows), v2.shape[1] * v2.shape[2]
-    flat = v2.reshape(count, samples)
-    squares = {name: (term**2).reshape(count, samples) for name, term in by_sample.items() if term is not None}
+            squares["photon"] = 1 / snr**2
     total = np.sum(list(squares.values()), axis=0)
     if judge == "rms":
 
@@ -145,7 +214,8 @@ def error_budget(
     return Budget(
         terms={name: summarise(squares[name]) if name in squares else None for name in TERMS},
         total=summarise(total),
-        v2_min=flat.min(axis=1),
-        v2_max=flat.max(axis=1),
+        v2_min=v2.min(axis=1),
+        v2_max=v2.max(axis=1),
         limb_darkening=u,
+        slopes=slope,
     )

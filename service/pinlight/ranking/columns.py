@@ -46,6 +46,7 @@ class StarColumns:
     edition : the edition's name
     ids, names, spectral_types : star ids; names and types as UTF-8 bytes
     ra_deg, dec_deg : ICRS at epoch 2000
+    pm_ra_mas_yr, pm_dec_mas_yr, parallax_mas, radial_velocity_km_s : NaN where unknown
     flags : bits of `FLAGS`
     magnitudes, magnitude_errors : band -> array
     diameter_mas, own_error_mas, shared_error_mas : limb-darkened diameter, and its error in two parts
@@ -64,6 +65,10 @@ class StarColumns:
     spectral_types: NDArray[np.bytes_]
     ra_deg: NDArray[np.float64]
     dec_deg: NDArray[np.float64]
+    pm_ra_mas_yr: NDArray[np.float32]
+    pm_dec_mas_yr: NDArray[np.float32]
+    parallax_mas: NDArray[np.float32]
+    radial_velocity_km_s: NDArray[np.float32]
     flags: NDArray[np.uint64]
     magnitudes: dict[str, NDArray[np.float32]]
     magnitude_errors: dict[str, NDArray[np.float32]]
@@ -82,6 +87,11 @@ class StarColumns:
 
     def __len__(self) -> int:
         return len(self.ids)
+
+    def motion(self, rows: NDArray[np.int64]) -> tuple[NDArray[np.float32], ...]:
+        """Proper motion, parallax and radial velocity of some rows, as `move_to_epoch` takes them."""
+        columns = (self.pm_ra_mas_yr, self.pm_dec_mas_yr, self.parallax_mas, self.radial_velocity_km_s)
+        return tuple(column[rows] for column in columns)
 
     def cone(
         self, ra_deg: float, dec_deg: float, radius_deg: float

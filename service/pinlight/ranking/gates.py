@@ -9,13 +9,14 @@ from pinlight.ranking.columns import StarColumns, flag_bits
 from pinlight.ranking.setup import Setup, Thresholds
 from pinlight.ranking.target import Target
 
-__all__ = ["COMPANION_LIMIT", "REASONS", "close_gates"]
+__all__ = ["COMPANION_LIMIT", "REASONS", "REMARKS", "close_gates"]
 
 # Each reason and what it means, in the order of the gates; a star is counted at the first it fails.
 REASONS = {
     "is_target": "it is the target itself",
     "target_companion": "within 60 arcsec of the target",
     "too_far": "farther from the target than the limit",
+    "never_up": "never rises above the array's altitude limit",
     "no_diameter": "no published relation applies to its type and colours",
     "no_magnitude": "no magnitude in the mode's band",
     "too_faint": "fainter than the limit",
@@ -25,8 +26,13 @@ REASONS = {
     "companion": "an entry of several stars, or a bright companion in the field",
     "variable": "a variable or unstable star of a kind that is not constant enough",
     "discordant": "its colours disagree about its diameter",
+    "not_up": "not observable while the target is",
+    "out_of_reach": "the delay lines cannot reach it and the target with one coarse setting",
     "resolved": "its squared visibility falls below the floor",
 }
+
+# The flags that a reader of a ranking wants to see beside a star that passed the gates.
+REMARKS = ("component", "variable", "fast_rotator", "peculiar")
 
 _SAME_STAR_DEG = 2 / 3600
 _COMPANION_OF_TARGET_DEG = 60 / 3600
@@ -37,8 +43,9 @@ _CLOSE_BINARY = flag_bits(
     "spectroscopic_binary eclipsing_binary ellipsoidal active_binary cataclysmic xray_binary composite_spectrum"
 )
 _DOUBLE = flag_bits("double")
-# Left in: variables of small amplitude (delta Sct, gamma Dor, beta Cep, alpha2 CVn, BY Dra, rotating
-# and unspecified ones), whose brightness, and so diameter, moves by a per cent or two.
+# Left in, with their flag shown: variables of kinds whose amplitude is mostly a few hundredths of a
+# magnitude (delta Sct, gamma Dor, beta Cep, alpha2 CVn, BY Dra, rotating; common practice, no source),
+# and those whose kind the source does not tell.
 _UNSTEADY = flag_bits(
     "pulsating semiregular long_period mira cepheid rr_lyrae rv_tauri sx_phoenicis flare orion_variable "
     "irregular r_crb be_star emission_line pre_main_sequence t_tauri carbon_star s_star wolf_rayet"
@@ -86,6 +93,10 @@ def close_gates(
         same = stars.ids[rows] == target.star_id
     close("is_target", same)
     close("target_companion", separations_deg <= _COMPANION_OF_TARGET_DEG)
+    if setup.dec_range_deg is not None:
+        lowest, highest = setup.dec_range_deg
+        dec = stars.dec_deg[rows]
+        close("never_up", (dec < lowest) | (dec > highest))
     close("no_diameter", ~np.isfinite(stars.diameter_mas[rows]))
     close("no_magnitude", ~np.isfinite(stars.magnitudes[setup.band][rows]))
     if limits.magnitude_max is not None:

@@ -1,22 +1,46 @@
 """The one result object behind every face."""
 
 import math
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from pinlight.ranking.budget import TERMS
 from pinlight.ranking.setup import Setup, Thresholds
 from pinlight.ranking.target import Target
+from pinlight.sky.time import format_utc
+from pinlight.sky.windows import Window
 
 if TYPE_CHECKING:
     from astropy.table import QTable
 
-__all__ = ["Calibrator", "Ranking"]
+__all__ = ["Calibrator", "CalibratorSet", "Ranking", "windows_json"]
 
 
 def _rounded(value: float | None, digits: int) -> float | None:
     """JSON has no NaN and no infinity; both become null."""
     return None if value is None or not math.isfinite(value) else round(float(value), digits)
+
+
+def windows_json(windows: Iterable[Window]) -> list[dict[str, str]]:
+    """Windows as they stand in JSON."""
+    return [{"start_utc": format_utc(start), "end_utc": format_utc(end)} for start, end in windows]
+
+
+@dataclass(frozen=True)
+class CalibratorSet:
+    """Stars looked at together, and their calibration error, relative."""
+
+    star_ids: tuple[int, ...]
+    calibration_error: float
+
+    def to_dict(self) -> dict[str, Any]:
+        """As it stands in a ranking's JSON."""
+        return {
+            "size": len(self.star_ids),
+            "star_ids": list(self.star_ids),
+            "calibration_error_percent": _rounded(100 * self.calibration_error, 4),
+        }
 
 
 @dataclass(frozen=True)
@@ -43,6 +67,7 @@ class Calibrator:
     budget: dict[str, float | None]
     calibration_error: float
     standing: str | None
+    windows: tuple[Window, ...] | None
 
     def to_dict(self, band: str) -> dict[str, Any]:
         """As it stands in a ranking's JSON."""
@@ -79,7 +104,7 @@ class Calibrator:
             },
             "calibration_error_percent": _rounded(100 * self.calibration_error, 4),
             "standing": self.standing,
-            "window_utc": None,
+            "window_utc": None if self.windows is None else windows_json(self.windows),
         }
 
 
@@ -88,7 +113,10 @@ class Ranking:
     """The calibrators of one target, best first, and why all other stars are not among them.
 
     `excluded` counts every star of the edition that failed a gate, by reason; with the
-    `ranked` stars, of which the best are `calibrators`, it adds up to `stars`.
+    `ranked` stars, of which the best are `calibrators`, it adds up to `stars`. `best_sets` has
+    the best set of each size from 1; `named_set` is one that the caller asked for. With a clock,
+    `span` is the time looked at, `target_windows` are the target's, and `coarse_paths_m` the
+    coarse delay settings that give it its longest one. `names` are the names of the stars in sets.
     """
 
     edition: str
@@ -102,6 +130,12 @@ class Ranking:
     stars: int
     ranked: int
     excluded: dict[str, int]
+    best_sets: tuple[CalibratorSet, ...]
+    named_set: CalibratorSet | None
+    span: Window | None
+    target_windows: tuple[Window, ...] | None
+    coarse_paths_m: dict[str, float] | None
+    names: dict[int, str]
     notes: tuple[str, ...]
 
     def to_dict(self) -> dict[str, Any]:
@@ -121,14 +155,11 @@ class Ranking:
             "calibrators": [star.to_dict(self.setup.band) for star in self.calibrators],
             "counts": {"stars": self.stars, "ranked": self.ranked, "listed": len(self.calibrators)},
             "excluded": dict(self.excluded),
-            "best_sets": [
-                {
-                    "size": 1,
-                    "star_ids": [star.star_id],
-                    "calibration_error_percent": _rounded(100 * star.calibration_error, 4),
-                }
-                for star in self.calibrators[:1]
-            ],
+            "best_sets": [one.to_dict() for one in self.best_sets],
+            "named_set": None if self.named_set is None else self.named_set.to_dict(),
+            "span_utc": None if self.span is None else windows_json([self.span])[0],
+            "target_window_utc": None if self.target_windows is None else windows_json(self.target_windows),
+            "coarse_paths_m": self.coarse_paths_m,
             "notes": list(self.notes),
         }
 

@@ -67,7 +67,8 @@ class Setup:
 
     `nodes_um`, shape (C, 3 or 1), and `weights` integrate each channel. `mode` and `drift` are
     None for the quick answer; the terms that need them are then left out. `look_interval_min`
-    is the time between a calibrator's look and the target's.
+    is the time between a calibrator's look and the target's. `dec_range_deg` are the declinations
+    that rise above the array's altitude limit, None without an array.
     """
 
     array_name: str | None
@@ -82,6 +83,12 @@ class Setup:
     field_arcsec: float
     look_interval_min: float | None
     limits: Thresholds
+    dec_range_deg: tuple[float, float] | None = None
+
+    @property
+    def mode_name(self) -> str | None:
+        """The mode's name, None for the quick answer."""
+        return self.mode.name if self.mode else None
 
     @property
     def baselines_m(self) -> NDArray[np.float64]:
@@ -97,7 +104,7 @@ class Setup:
                 {"stations": list(baseline.stations), "length_m": round(baseline.length_m, 3)}
                 for baseline in self.baselines
             ],
-            "mode": self.mode.name if self.mode else None,
+            "mode": self.mode_name,
             "band": self.band,
             "wavelength_um": self.wavelength_um,
             "bandwidth_um": self.mode.bandwidth_um if self.mode else None,
@@ -138,7 +145,14 @@ def setup_of(array: Array, stations: list[str] | None = None, mode: str | None =
             chosen_mode.limiting_magnitude,
             chosen_mode.bright_limit_magnitude,
         ),
+        dec_range_deg=_dec_range_deg(array),
     )
+
+
+def _dec_range_deg(array: Array) -> tuple[float, float]:
+    """Declinations whose culmination, 90 - |latitude - dec|, lies above the altitude limit."""
+    reach = 90 - array.limits.altitude_min_deg
+    return array.latitude_deg - reach, array.latitude_deg + reach
 
 
 def quick_setup(baseline_m: float, wavelength_um: float) -> Setup:

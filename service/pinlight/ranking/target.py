@@ -9,6 +9,8 @@ from pinlight.sky.positions import check_position
 
 __all__ = ["Target"]
 
+_LONGEST_NAME = 200
+
 
 @dataclass(frozen=True)
 class Target:
@@ -20,8 +22,8 @@ class Target:
     Raises
     ------
     InputError
-        If the position is no place on the sky, the diameter is not positive, or a magnitude
-        cannot be one.
+        If the position is no place on the sky, the name cannot be printed, the diameter is not
+        positive, or a magnitude cannot be one.
     """
 
     ra_deg: float
@@ -33,6 +35,11 @@ class Target:
 
     def __post_init__(self) -> None:
         check_position(self.ra_deg, self.dec_deg)
+        if not self.name.isprintable() or len(self.name) > _LONGEST_NAME:
+            shown = self.name[:60]
+            raise InputError(
+                f"name is {shown!r}; it must be printable and have at most {_LONGEST_NAME} letters"
+            )
         if self.diameter_mas is not None and not 0 < self.diameter_mas < 1e4:
             raise InputError(f"diameter_mas is {self.diameter_mas:g}; it must be positive and below 10000")
         for band, value in self.magnitudes.items():

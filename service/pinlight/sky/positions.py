@@ -26,14 +26,10 @@ _GALACTIC_POLE_RA_DEG, _GALACTIC_POLE_DEC_DEG = 192.85948, 27.12825
 
 _AU_PER_YEAR_KM_S = 4.740470463533  # 149 597 870.7 km (IAU 2012 resolution B2) in a Julian year
 
-_NUMBER = r"\d+(?:\.\d*)?"
-_SEXAGESIMAL = re.compile(
-    rf"(?P<h>\d{{1,3}})(?:\s*[:h]\s*|\s+)(?P<m>{_NUMBER})(?:(?:\s*[:m]\s*|\s+)(?P<s>{_NUMBER})\s*s?)?\s*m?"
-    rf"[\s,]*(?P<sign>[+\-−])?\s*(?P<d>\d{{1,2}})(?:\s*[:d°]\s*|\s+)(?P<am>{_NUMBER})"
-    rf"(?:(?:\s*[:m'′]\s*|\s+)(?P<as>{_NUMBER})\s*[s\"″]?)?\s*[m'′]?"
-)
-_REAL = r"(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?|nan|inf"
-_DECIMAL = re.compile(rf"(?P<ra>[+-]?(?:{_REAL}))\s*d?[\s,]\s*(?P<dec>[+\-−]?(?:{_REAL}))\s*d?")
+# Of sexagesimal positions: their signs and separators, and one number.
+_SEXAGESIMAL_LETTERS = re.compile("[0-9:hmsd°'\"′″,.+\\-\\s]+", re.IGNORECASE)
+_SEXAGESIMAL_NUMBER = re.compile(r"[+-]?\d+(?:\.\d*)?")
+_LONGEST_TEXT = 200
 
 
 def check_position(ra_deg: float, dec_deg: float) -> tuple[float, float]:
@@ -51,35 +47,35 @@ def check_position(ra_deg: float, dec_deg: float) -> tuple[float, float]:
 
 
 def looks_like_coordinates(text: str) -> bool:
-    """Whether `text` is written as a pair of coordinates, possible ones or not.
+    """Whether `text` is written as coordinates, possible ones or not, rather than as a name.
 
     >>> looks_like_coordinates("10:15:30 +20:05:00"), looks_like_coordinates("HD 10700")
     (True, False)
     """
-    return _as_degrees(text) is not None
+    text = text.strip().replace("−", "-")
+    if len(text) > _LONGEST_TEXT:
+        return False
+    if _two_numbers(text) is not None:
+        return True
+    numbers = _SEXAGESIMAL_NUMBER.findall(text)
+    return text[:1].isdigit() and len(numbers) > 1 and bool(_SEXAGESIMAL_LETTERS.fullmatch(text))
 
 
-def _as_degrees(text: str) -> tuple[float, float] | None:
-    text = text.strip()
-    if match := _SEXAGESIMAL.fullmatch(text):
-        hours, minutes, seconds = (float(match[key] or 0) for key in ("h", "m", "s"))
-        degrees, arcmin, arcsec = (float(match[key] or 0) for key in ("d", "am", "as"))
-        for value in (minutes, seconds, arcmin, arcsec):
-            if value >= 60:
-                raise InputError(f"{text!r} has {value:g} minutes or seconds; they must be below 60")
-        ra_deg = 15 * (hours + minutes / 60 + seconds / 3600)
-        dec_deg = degrees + arcmin / 60 + arcsec / 3600
-        return ra_deg, -dec_deg if match["sign"] in ("-", "−") else dec_deg
-    if match := _DECIMAL.fullmatch(text):
-        return float(match["ra"]), float(match["dec"].replace("−", "-"))
-    return None
+def _two_numbers(text: str) -> tuple[float, float] | None:
+    parts = text.replace(",", " ").split()
+    if len(parts) != 2:
+        return None
+    try:
+        return tuple(float(part.rstrip("d°")) for part in parts)  # type: ignore[return-value]
+    except ValueError:
+        return None
 
 
 def parse_coordinates(text: str) -> tuple[float, float]:
     """Right ascension and declination in degrees from the ways people write them.
 
-    Decimal degrees (``"153.875 20.083"``), or hours and degrees with colons, blanks or
-    unit letters.
+    Decimal degrees (``"153.875 20.083"``), or hours and degrees with minutes and, if wanted,
+    seconds, between colons, blanks or unit letters.
 
     Raises
     ------
@@ -90,13 +86,43 @@ def parse_coordinates(text: str) -> tuple[float, float]:
     --------
     >>> parse_coordinates("10:15:30 +20:05:00")
     (153.875, 20.083333333333332)
-    >>> parse_coordinates("10h15m30s -20d05m00s")
-    (153.875, -20.083333333333332)
+    >>> parse_coordinates("10h15m -20d05m")
+    (153.75, -20.083333333333332)
     """
-    place = _as_degrees(text)
-    if place is None:
-        raise InputError(f"{text!r} is no position; write degrees ('153.875 20.083') or '10:15:30 +20:05:00'")
-    return check_position(*place)
+    text = text.strip().replace("−", "-")
+    wrong = f"{text[:60]!r} is no position; write degrees ('153.875 20.083') or '10:15:30 +20:05:00'"
+    if not looks_like_coordinates(text):
+        raise InputError(wrong)
+    if (decimal := _two_numbers(text)) is not None:
+        return check_position(*decimal)
+    halves = _halves(text)
+    if halves is None:
+        open_end = "leaves open where the declination begins; put a sign or a blank before it"
+        raise InputError(f"{text[:60]!r} {open_end}")
+    ra, dec = (_sexagesimal(text, part) for part in halves)
+    return check_position(15 * ra, -dec if "-" in halves[1] else dec)
+
+
+def _halves(text: str) -> tuple[str, str] | None:
+    """The parts of right ascension and declination, None where that is not plain."""
+    if sign := re.search("[+-]", text):
+        return text[: sign.start()], text[sign.start() :]
+    if re.search("[^0-9.,\\s]", text):  # colons or unit letters: the blank between the two is the border
+        parts = re.split(r"[\s,]+", re.sub(r"\s*:\s*", ":", text))
+        return (parts[0], parts[1]) if len(parts) == 2 else None
+    numbers = text.replace(",", " ").split()
+    half = len(numbers) // 2
+    return (" ".join(numbers[:half]), " ".join(numbers[half:])) if len(numbers) in (4, 6) else None
+
+
+def _sexagesimal(text: str, part: str) -> float:
+    values = [abs(float(number)) for number in _SEXAGESIMAL_NUMBER.findall(part)]
+    if len(values) not in (2, 3):
+        raise InputError(f"{text[:60]!r} has {len(values)} numbers in a coordinate; it takes 2 or 3")
+    for value in values[1:]:
+        if value >= 60:
+            raise InputError(f"{text[:60]!r} has {value:g} minutes or seconds; they must be below 60")
+    return sum(value / 60**power for power, value in enumerate(values))
 
 
 def unit_vectors(ra_deg: ArrayLike, dec_deg: ArrayLike) -> Floats:

@@ -1,0 +1,70 @@
+"""A plan on paper: CSV, iCalendar and a printable page."""
+
+import csv
+import io
+from datetime import UTC, datetime
+from importlib.resources import files
+
+from pinlight.planning.night import NightPlan
+from pinlight.sky.time import format_utc
+from pinlight.version import __version__
+
+__all__ = ["plan_csv", "plan_ics", "plan_page"]
+
+_COLUMNS = ("block", "target", "role", "name", "star_id", "start_utc", "end_utc", "calibration_error_percent")
+
+
+def plan_csv(plan: NightPlan) -> str:
+    """One line a look."""
+    text = io.StringIO()
+    writer = csv.writer(text, lineterminator="\n")
+    writer.writerow(_COLUMNS)
+    for number, block in enumerate(plan.to_dict()["blocks"], start=1):
+        for look in block["looks"]:
+            writer.writerow(
+                [
+                    number, block["target"], look["role"], look["name"], look["star_id"], look["start_utc"],
+                    look["end_utc"], block["calibration_error_percent"],
+                ]
+            )  # fmt: skip
+    return text.getvalue()
+
+
+def _moment(mjd_tai: float) -> datetime:
+    text = format_utc(mjd_tai).replace(":60Z", ":59Z")  # datetime knows no leap second
+    return datetime.fromisoformat(text)
+
+
+def plan_ics(plan: NightPlan) -> str:
+    """One event a block, RFC 5545."""
+    from icalendar import Calendar, Event
+
+    calendar = Calendar()
+    calendar.add("prodid", f"-//Pinlight//{__version__}//EN")
+    calendar.add("version", "2.0")
+    for number, block in enumerate(plan.blocks, start=1):
+        event = Event()
+        start = format_utc(block.start)
+        event.add("uid", f"{plan.edition}-{start}-{number}@pinlight")
+        event.add("dtstamp", datetime.now(UTC))
+        event.add("dtstart", _moment(block.start))
+        event.add("dtend", _moment(block.end))
+        event.add("summary", f"{block.target} ({100 * block.calibration_error:.2f} %)")
+        paths = ", ".join(f"{name} {path:g} m" for name, path in block.coarse_paths_m.items())
+        looks = "\n".join(f"{format_utc(look.start)[11:16]} {look.role} {look.name}" for look in block.looks)
+        event.add("description", f"{looks}\nCoarse paths: {paths}")
+        if plan.setup.array_name:
+            event.add("location", plan.setup.array_name)
+        calendar.add_component(event)
+    return str(calendar.to_ical().decode("utf-8"))
+
+
+def plan_page(plan: NightPlan) -> str:
+    """One HTML file that needs no network and prints well."""
+    from jinja2 import Environment, FileSystemLoader, select_autoescape
+
+    folder = str(files("pinlight.faces").joinpath("templates"))
+    environment = Environment(loader=FileSystemLoader(folder), autoescape=select_autoescape())
+    environment.filters["clock"] = lambda time: format_utc(time)[11:16]
+    environment.filters["utc"] = format_utc
+    return environment.get_template("plan.html").render(plan=plan, version=__version__)

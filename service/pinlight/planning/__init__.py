@@ -1,0 +1,1 @@
+"""Planning: blocks of looks, and nights of blocks."""

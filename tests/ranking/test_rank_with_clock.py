@@ -1,0 +1,113 @@
+"""Ranking with a clock: reach, windows and projected baselines."""
+
+import numpy as np
+import pytest
+
+from pinlight.faces.library import rank as rank_named
+from pinlight.ranking.clock import night_clock, span_clock
+from pinlight.ranking.rank import rank
+from pinlight.ranking.setup import setup_of
+from pinlight.ranking.target import Target
+from pinlight.sky.time import parse_utc
+from tests.ranking.stars import columns
+
+TARGET = Target(60.0, 28.0, magnitudes={"H": 4.0})
+
+
+@pytest.fixture(scope="module")
+def answer(catalogue, north):
+    return rank_named(catalogue, TARGET, array=north, mode="H", night="2026-12-01")
+
+
+def test_every_calibrator_has_windows_inside_the_night_and_its_conditions(answer, north):
+    clock = night_clock(north, north.station, "2026-12-01")
+    target_place = clock.apparent(TARGET.ra_deg, TARGET.dec_deg)
+    settings_of = [tuple(range(len(s.coarse_paths_m))) for s in north.station]
+    assert len(answer.calibrators) == 20
+    for star in answer.calibrators:
+        assert star.windows
+        place = clock.apparent(star.ra_deg, star.dec_deg)
+        for start, end in star.windows:
+            assert clock.times[0] - 1e-9 <= start < end <= clock.times[-1] + 1e-9
+            inside = np.linspace(start, end, 15)
+            assert clock.observable(*place, inside).all()
+            assert clock.observable(*target_place, inside).all()
+            # One coarse setting holds both throughout: found here by trying all of them.
+            delays = [clock.delays_m(*p, inside) for p in (place, target_place)]
+            together = [
+                k
+                for k in np.ndindex(*(len(options) for options in settings_of))
+                if all(clock.delay_lines.with_settings(k, d).all() for d in delays)
+            ]
+            assert together, star.name
+
+
+def test_baselines_are_projected(answer):
+    longest = max(pair.length_m for pair in answer.setup.baselines)
+    assert all(0.3 * longest < star.longest_baseline_m < longest for star in answer.calibrators)
+
+
+def test_the_json_has_windows_and_coarse_paths(answer):
+    told = answer.to_dict()
+    assert told["span_utc"]["start_utc"].startswith("2026-12-01T")
+    assert set(told["coarse_paths_m"]) == {"Ash", "Birch", "Cedar", "Hazel", "Rowan", "Willow"}
+    for star in told["calibrators"]:
+        for window in star["window_utc"]:
+            assert window["start_utc"] < window["end_utc"]
+            assert window["start_utc"].endswith("Z")
+    assert not any("No time given" in note for note in told["notes"])
+
+
+def test_a_moment_is_a_span_of_no_length(catalogue, north):
+    now = rank_named(catalogue, TARGET, array=north, mode="H", at="2026-12-01T21:00Z")
+    if now.calibrators:
+        [(start, end)] = now.calibrators[0].windows
+        assert start == end == pytest.approx(parse_utc("2026-12-01T21:00Z"))
+    day = rank_named(catalogue, TARGET, array=north, mode="H", at="2026-12-01T10:00Z")
+    assert day.calibrators == ()
+    assert any("the Sun is never below" in note for note in day.notes)
+    assert day.ranked + sum(day.excluded.values()) == day.stars
+
+
+def test_a_star_that_is_not_up_and_one_out_of_reach_are_told_apart(north):
+    lines = [s.model_copy(update={"cart_m": 6.0}) for s in north.station[:3]]
+    array = north.model_copy(update={"station": tuple(lines)})
+    setup = setup_of(array, None, "H")
+    limits = setup.limits.replace(separation_max_deg=100.0)
+    clock = span_clock(array, array.station, "2026-12-01T20:00Z", "2026-12-01T23:00Z")
+    stars = columns(
+        [
+            {"ra_deg": 60.0, "dec_deg": 27.9},
+            {"ra_deg": 130.0, "dec_deg": 0.0},
+            {"ra_deg": 90.0, "dec_deg": 60.0},
+        ]
+    )
+    found = rank(stars, TARGET, setup, limits=limits, clock=clock)
+    assert found.excluded == {"not_up": 1, "out_of_reach": 1}
+    assert [c.star_id for c in found.calibrators] == [1]
+
+
+@pytest.mark.parametrize(
+    ("options", "message"),
+    [
+        ({"night": "2026-12-01", "at": "2026-12-01T20:00"}, "night and at are both given"),
+        ({"from_": "2026-12-01T20:00"}, "to is missing; give both, or a night"),
+        ({"night": "2026-06-32"}, "night is '2026-06-32'; write UTC"),
+        ({"night": "2026-12-01", "stations": "Ash"}, "stations is Ash; it takes at least two"),
+    ],
+)
+def test_a_time_that_is_none_is_named(catalogue, options, message):
+    with pytest.raises(ValueError, match=message):
+        rank_named(catalogue, TARGET, array="north", mode="H", **options)
+
+
+def test_a_time_needs_an_array(catalogue):
+    with pytest.raises(ValueError, match="is given without an array"):
+        rank_named(catalogue, TARGET, baseline_m=100.0, wavelength_um=1.6, night="2026-12-01")
+
+
+@pytest.mark.parametrize("date", ["1970-01-05", "2016-12-31", "2100-01-05"])
+def test_leap_second_days_and_far_dates_work(catalogue, north, date):
+    found = rank_named(catalogue, TARGET, array=north, mode="H", night=date)
+    assert found.calibrators
+    assert found.calibrators[0].windows
