@@ -75,10 +75,10 @@ class TargetReach:
             together = (
                 lines.with_settings(option.settings, delays[:, which]) & observable[which] & option.in_reach
             )
-            # Of the later choices the first that reaches a star will do.
-            length = (
-                _longest_runs(together) if index < _FIRST_CHOICES else together.any(axis=1).astype(np.int64)
-            )
+            if index < _FIRST_CHOICES:
+                length = _longest_runs(together)
+            else:  # of the later choices the first that reaches a star will do
+                length = np.asarray(together.any(axis=1), dtype=np.int64)
             better = length > longest[which]
             gained = which[better]
             times[gained], choice[gained], longest[gained] = together[better], index, length[better]
