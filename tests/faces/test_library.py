@@ -121,6 +121,23 @@ def test_a_diameter_from_magnitudes():
     }  # fmt: skip
 
 
+def test_an_extinction_map_of_ones_own_is_asked():
+    asked = []
+
+    def dust(ra_deg, dec_deg, parallax_mas):
+        asked.append((ra_deg, dec_deg, parallax_mas))
+        return 0.4, 0.1
+
+    options = {"spectral_type": "K1III", "position_deg": (80.0, 10.0), "parallax_mas": 4.0}
+    mapped = predict_diameter({"V": 5.6, "Ks": 2.95}, extinction_map=dust, **options)
+    given = predict_diameter({"V": 5.6, "Ks": 2.95}, av_mag=0.4, av_error_mag=0.1, **options)
+    assert asked == [(80.0, 10.0, 4.0)]
+    assert mapped == given
+    assert (mapped["av_mag"], mapped["av_error_mag"]) == (0.4, 0.1)
+    surer = predict_diameter({"V": 5.6, "Ks": 2.95}, av_mag=0.4, av_error_mag=0.01, **options)
+    assert surer["diameter"]["own_error_mas"] < given["diameter"]["own_error_mas"]
+
+
 @pytest.mark.parametrize(
     ("magnitudes", "options", "message"),
     [

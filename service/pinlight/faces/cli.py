@@ -180,6 +180,7 @@ def _magnitude_options(function: Callable[..., Any]) -> Callable[..., Any]:
 @click.option("--ra-deg", type=float)
 @click.option("--dec-deg", type=float)
 @click.option("--av-mag", type=float, help="Extinction, in place of what is expected at its distance.")
+@click.option("--av-error-mag", type=float, help="Its error.")
 @click.option("--band", default="Ks", show_default=True, help="Where the uniform-disc diameter is wanted.")
 @_as_json
 def diameter(
@@ -188,6 +189,7 @@ def diameter(
     ra_deg: float | None,
     dec_deg: float | None,
     av_mag: float | None,
+    av_error_mag: float | None,
     band: str,
     as_json: bool,
     **magnitudes: float | None,
@@ -205,6 +207,7 @@ def diameter(
         parallax_mas=parallax_mas,
         position_deg=None if ra_deg is None or dec_deg is None else (ra_deg, dec_deg),
         av_mag=av_mag,
+        av_error_mag=av_error_mag,
         band=band,
     )
     if as_json:

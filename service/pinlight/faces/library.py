@@ -1,7 +1,7 @@
 """The calls that every face makes."""
 
 import csv
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -49,6 +49,9 @@ __all__ = [
     "resolve_target",
     "track_target",
 ]
+
+# A_V and its error at a place and parallax.
+ExtinctionMap = Callable[[float, float, float], tuple[float, float]]
 
 # Steps of a ranking's clock; windows are found finer.
 _RANK_STEP_MIN = 10.0
@@ -463,6 +466,8 @@ def predict_diameter(
     parallax_mas: float | None = None,
     position_deg: tuple[float, float] | None = None,
     av_mag: float | None = None,
+    av_error_mag: float | None = None,
+    extinction_map: ExtinctionMap | None = None,
     band: str = "Ks",
     name: str = "",
 ) -> dict[str, Any]:
@@ -476,8 +481,11 @@ def predict_diameter(
         Without one, parallax and colour tell a dwarf from a giant.
     parallax_mas, position_deg : optional
         For the extinction prior; without a parallax no extinction is assumed.
-    av_mag : float, optional
-        In place of the prior.
+    av_mag, av_error_mag : float, optional
+        In place of the prior; without an error max(0.05, 0.5 A_V) is taken.
+    extinction_map : function of ra_deg, dec_deg, parallax_mas, optional
+        A map of your own: gives A_V and its error, in place of the prior, where `av_mag` is not
+        given and position and parallax are.
     band : str
         Where the uniform-disc diameter is wanted.
 
@@ -500,8 +508,11 @@ def predict_diameter(
         raise InputError(f"{len(magnitudes)} magnitude is given; a colour takes at least two bands")
     if parallax_mas is not None and not 0 < parallax_mas < 1000:
         raise InputError(f"parallax_mas is {parallax_mas:g}; it must lie between 0 and 1000")
-    if av_mag is not None and not 0 <= av_mag < 50:
-        raise InputError(f"av_mag is {av_mag:g}; it must lie between 0 and 50")
+    if av_mag is None and extinction_map is not None and position_deg is not None and parallax_mas is not None:
+        av_mag, av_error_mag = extinction_map(*position_deg, parallax_mas)
+    for key, extinction in (("av_mag", av_mag), ("av_error_mag", av_error_mag)):
+        if extinction is not None and not 0 <= extinction < 50:
+            raise InputError(f"{key} is {extinction:g}; it must lie between 0 and 50")
     # Without a distance the prior would put the star behind all the dust there is.
     av = (0.0 if parallax_mas is None else np.nan) if av_mag is None else av_mag
     latitude = 90.0 if position_deg is None else float(galactic_latitude_deg(*check_position(*position_deg)))
@@ -522,6 +533,7 @@ def predict_diameter(
             parallax_mas=np.array([np.nan if parallax_mas is None else parallax_mas]),
             galactic_latitude_deg=np.array([latitude]),
             av_mag=np.array([av]),
+            av_error_mag=np.array([np.nan if av_error_mag is None else av_error_mag]),
         ),
         relation_set,
     )
@@ -545,6 +557,7 @@ def predict_diameter(
         },
         "luminosity_group": str(result.luminosity_group[0]),
         "av_mag": round(float(result.av_mag[0]), 4),
+        "av_error_mag": round(float(result.av_error_mag[0]), 4),
         "teff_k": round(float(result.teff_k[0])),
         "relation_set": relation_set.hash,
         "parts": [

@@ -139,7 +139,8 @@ def show_diameter(answer: dict[str, Any]) -> None:
     result, console = answer["diameter"], _console()
     _diameter_line(console, result)
     console.print(f"uniform-disc diameter in {result['band']}: {result['uniform_disk_mas']:.4f} mas")
-    console.print(f"as a {answer['luminosity_group']}, Teff {answer['teff_k']} K, A_V {answer['av_mag']:.2f}")
+    extinction = f"A_V {answer['av_mag']:.2f} ± {answer['av_error_mag']:.2f}"
+    console.print(f"as a {answer['luminosity_group']}, Teff {answer['teff_k']} K, {extinction}")
     if result["discordant"]:
         console.print("[bold]discordant[/bold]: its colours disagree about its diameter")
     for part in answer["parts"]:
