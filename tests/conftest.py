@@ -6,7 +6,7 @@ from pathlib import Path
 import pytest
 
 from pinlight.catalogue.store import Catalogue, make_catalogue
-from pinlight.faces.library import known_arrays
+from pinlight.faces.setups import known_arrays
 
 
 def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:

@@ -9,7 +9,8 @@ if TYPE_CHECKING:
     from pinlight.arrays.files import Array, load_array
     from pinlight.catalogue.store import Catalogue, make_catalogue, open_catalogue
     from pinlight.errors import CatalogueError, InputError, NotFoundError, PinlightError
-    from pinlight.faces.library import best_set, plan_night, rank, read_requests
+    from pinlight.faces.library import best_set, plan_night, rank
+    from pinlight.faces.targets import read_requests
     from pinlight.planning.night import NightPlan, Request
     from pinlight.ranking.result import Ranking
     from pinlight.ranking.target import Target
@@ -53,7 +54,7 @@ _HOMES = {
     "open_catalogue": "pinlight.catalogue.store",
     "plan_night": "pinlight.faces.library",
     "rank": "pinlight.faces.library",
-    "read_requests": "pinlight.faces.library",
+    "read_requests": "pinlight.faces.targets",
 }
 
 

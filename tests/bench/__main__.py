@@ -16,7 +16,7 @@ from pinlight.catalogue.seed import read_seed
 from pinlight.catalogue.store import make_catalogue
 from pinlight.diameters.prediction import StarPhotometry, predict_diameters
 from pinlight.diameters.relations import load_relations
-from pinlight.faces.library import known_arrays
+from pinlight.faces.setups import known_arrays
 from pinlight.photometry.bands import default_errors
 from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.planning.night import Request, plan_night

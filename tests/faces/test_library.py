@@ -1,7 +1,9 @@
 import pytest
 
 import pinlight as pl
-from pinlight.faces.library import find_array, predict_diameter, read_targets, resolve_target
+from pinlight.faces.diameter import predict_diameter
+from pinlight.faces.setups import find_array
+from pinlight.faces.targets import read_targets, resolve_target
 from pinlight.resources import seed_folder
 
 

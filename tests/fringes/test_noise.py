@@ -1,7 +1,7 @@
 import numpy as np
 import pytest
 
-from pinlight.faces.library import known_arrays
+from pinlight.faces.setups import known_arrays
 from pinlight.fringes.noise import counts_per_frame_at_mag0, snr_of_v2
 from pinlight.photometry.bands import BANDS
 

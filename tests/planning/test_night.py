@@ -5,8 +5,8 @@ import pytest
 
 from pinlight.errors import InputError
 from pinlight.faces.library import plan_night as plan
-from pinlight.faces.library import read_requests
 from pinlight.faces.models import PlanAnswer
+from pinlight.faces.targets import read_requests
 from pinlight.planning.night import Request
 from pinlight.ranking.clock import night_clock
 from pinlight.ranking.setup import setup_of

@@ -122,8 +122,9 @@ def rank(
 ) -> None:
     """Rank calibrators for TARGET: a star's name, coordinates, or a CSV file of targets."""
     from pinlight.catalogue.store import open_catalogue
-    from pinlight.faces.library import is_file, read_targets
     from pinlight.faces.library import rank as rank_target
+    from pinlight.faces.setups import is_file
+    from pinlight.faces.targets import read_targets
 
     catalogue = open_catalogue(db)
     in_file = target.lower().endswith(".csv") or is_file(target)
@@ -195,7 +196,7 @@ def diameter(
     **magnitudes: float | None,
 ) -> None:
     """A diameter from magnitudes: two bands or more."""
-    from pinlight.faces.library import predict_diameter
+    from pinlight.faces.diameter import predict_diameter
 
     if (ra_deg is None) != (dec_deg is None):
         raise InputError(f"{'dec_deg' if dec_deg is None else 'ra_deg'} is missing; give both or neither")
@@ -229,7 +230,7 @@ def array() -> None:
 def check(file: str, as_json: bool) -> None:
     """Check an array FILE and say what it holds."""
     from pinlight.arrays.geometry import baselines
-    from pinlight.faces.library import find_array
+    from pinlight.faces.setups import find_array
     from pinlight.fringes.visibility import resolution_mas
 
     found = find_array(file)
@@ -320,7 +321,8 @@ def plan(
 ) -> None:
     """Plan a night for the TARGETS of a CSV file."""
     from pinlight.catalogue.store import open_catalogue
-    from pinlight.faces.library import plan_night, read_requests
+    from pinlight.faces.library import plan_night
+    from pinlight.faces.targets import read_requests
 
     requests = read_requests(targets)
     night = plan_night(open_catalogue(db), requests, stations=_names(stations), **options)
@@ -392,8 +394,9 @@ def _serve(catalogue: "Catalogue", host: str, port: int, arrays: Path | None, op
 def demo(db: str | None, once: bool, port: int, as_json: bool) -> None:
     """See it work: real stars ranked for invented targets on two invented arrays, then the page."""
     from pinlight.catalogue.store import make_catalogue
-    from pinlight.faces.library import known_arrays, read_targets
     from pinlight.faces.library import rank as rank_target
+    from pinlight.faces.setups import known_arrays
+    from pinlight.faces.targets import read_targets
     from pinlight.resources import seed_folder
 
     catalogue = make_catalogue(db, progress=_say)

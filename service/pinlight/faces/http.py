@@ -12,7 +12,6 @@ from werkzeug.exceptions import HTTPException, NotFound
 from pinlight.arrays.geometry import baselines
 from pinlight.catalogue.store import Catalogue
 from pinlight.errors import CatalogueError, InputError, NotFoundError, PinlightError
-from pinlight.faces.library import known_arrays
 from pinlight.faces.models import PlanQuestion, RankingQuestion, StarsQuestion
 from pinlight.faces.openapi import describe_api
 from pinlight.faces.page import page
@@ -25,6 +24,7 @@ from pinlight.faces.service import (
     read_question,
     service,
 )
+from pinlight.faces.setups import known_arrays
 from pinlight.ranking.columns import StarColumns, flag_words
 from pinlight.sky.positions import check_position
 from pinlight.version import __version__

@@ -11,8 +11,9 @@ from werkzeug.exceptions import BadRequest
 from pinlight.arrays.files import Array, describe
 from pinlight.catalogue.store import Catalogue
 from pinlight.errors import InputError
-from pinlight.faces.library import named_array, plan_night, rank
+from pinlight.faces.library import plan_night, rank
 from pinlight.faces.models import PlanQuestion, RankingQuestion, TargetQuestion
+from pinlight.faces.setups import named_array
 from pinlight.planning.night import NightPlan, Request
 from pinlight.ranking.result import Ranking
 from pinlight.ranking.target import Target
