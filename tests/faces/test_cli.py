@@ -5,7 +5,9 @@ import sys
 
 import click
 import icalendar
+import numpy as np
 import pytest
+from astropy.table import Table
 from click.testing import CliRunner
 
 import pinlight as pl
@@ -99,6 +101,52 @@ def test_a_diameter_from_the_command_line(run):
     assert json.loads(answer.stdout)["diameter"]["relations"] == ["A18_giant_VK", "P19_VK"]
     shown = run("diameter", "--V", 5.134, "--Ks", 2.654, "--spectral-type", "K1III", "--band", "H")
     assert "uniform-disc diameter in H" in shown.stdout
+
+
+@pytest.mark.parametrize("kind", ["csv", "ecsv", "vot", "fits"])
+def test_diameters_of_a_table(run, tmp_path, kind):
+    table = Table(
+        {
+            "name": ["clump", "sunlike", "white", "one band", "absurd"],
+            "spectral_type": ["K1III", "G2V", "DA3", "G2V", "G2V"],
+            "V": [5.134, 4.811, 12.0, 6.0, 99.0],
+            "V_error": [0.01, 0.02, 0.02, 0.02, 0.02],
+            "Ks": [2.654, 3.274, 12.3, np.nan, 5.0],
+            "Ks_error": [0.01, 0.02, 0.02, np.nan, 0.02],
+            "note": ["a", "b", "c", "d", "e"],
+        }
+    )
+    formats = {"csv": "ascii.csv", "ecsv": "ascii.ecsv", "vot": "votable", "fits": "fits"}
+    table.write(tmp_path / f"t.{kind}", format=formats[kind])
+    answer = run("diameter", "--from", tmp_path / f"t.{kind}", "--json")
+    rows = json.loads(answer.stdout)
+    assert [row["name"] for row in rows] == ["clump", "sunlike", "white", "one band", "absurd"]
+    one = json.loads(
+        run(
+            "diameter",
+            "--V",
+            5.134,
+            "--V-error",
+            0.01,
+            "--Ks",
+            2.654,
+            "--Ks-error",
+            0.01,
+            "--spectral-type",
+            "K1III",
+            "--json",
+        ).stdout
+    )
+    # FITS and VOTable keep doubles; nothing is lost on the way.
+    assert rows[0]["diameter"] == one["diameter"]
+    assert rows[1]["diameter"]["limb_darkened_mas"] == pytest.approx(0.93, rel=0.02)
+    reasons = [row["reason"] for row in rows[2:]]
+    assert reasons[0] == "no published relation applies to a star of this type with these colours"
+    assert reasons[1].startswith("1 magnitude is given")
+    assert reasons[2] == "V is 99; a magnitude lies between -5 and 30"
+    shown = run("diameter", "--from", tmp_path / f"t.{kind}").stdout
+    assert "clump" in shown
+    assert "V is 99" in shown
 
 
 def test_an_array_is_checked(run, tmp_path):
@@ -276,6 +324,9 @@ QUICK = ("--baseline-m", 100, "--wavelength-um", 1.65)
         ),
         (("array", "track", "north", "60 28"), "from is missing; give from and to, or a night"),
         (("array", "import", "none.fits"), "cannot read none.fits as OIFITS"),
+        (("diameter", "--from", "none.csv"), "cannot read none.csv as csv: No such file"),
+        (("diameter", "--from", "none.txt"), "none.txt may end in one of .csv, .ecsv"),
+        (("diameter", "--from", "none.csv", "--V", 5), "from and V are both given"),
         (("serve", "--host", "no.such.invalid", "--open"), "cannot serve on no.such.invalid port 8765"),
         (("serve", "--host", "0.0.0.0"), "host is 0.0.0.0, which others can reach; add --open"),
         (("serve", "--arrays", "no-such-folder"), "arrays is no-such-folder, a folder without .toml files"),

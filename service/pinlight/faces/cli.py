@@ -19,6 +19,8 @@ if TYPE_CHECKING:
 
 __all__ = ["main"]
 
+_BANDS = ("B", "V", "J", "H", "Ks")
+
 # Heavy libraries are imported inside the commands: 'pinlight --help' has to answer at once.
 
 
@@ -167,7 +169,7 @@ def star(name: str, db: str | None, as_json: bool) -> None:
 
 
 def _magnitude_options(function: Callable[..., Any]) -> Callable[..., Any]:
-    for band in ("Ks", "H", "J", "V", "B"):
+    for band in reversed(_BANDS):
         error_help = f"Error of {band}; the band's default if not given."
         function = click.option(f"--{band}-error", f"{band}_error", type=float, help=error_help)(function)
         function = click.option(f"--{band}", band, type=float, help=f"Magnitude in {band}.")(function)
@@ -177,46 +179,47 @@ def _magnitude_options(function: Callable[..., Any]) -> Callable[..., Any]:
 @main.command()
 @_magnitude_options
 @click.option("--spectral-type", default="", help="Such as K1III.")
-@click.option("--parallax-mas", type=float)
-@click.option("--ra-deg", type=float)
-@click.option("--dec-deg", type=float)
+@click.option("--parallax-mas", type=float, help="For the extinction, and to tell a dwarf from a giant.")
+@click.option("--ra-deg", type=float, help="For the extinction.")
+@click.option("--dec-deg", type=float, help="For the extinction.")
 @click.option("--av-mag", type=float, help="Extinction, in place of what is expected at its distance.")
 @click.option("--av-error-mag", type=float, help="Its error.")
 @click.option("--band", default="Ks", show_default=True, help="Where the uniform-disc diameter is wanted.")
+@click.option(
+    "--from", "file", type=click.Path(path_type=Path), help="Stars of a CSV, ECSV, VOTable or FITS file."
+)
 @_as_json
-def diameter(
-    spectral_type: str,
-    parallax_mas: float | None,
-    ra_deg: float | None,
-    dec_deg: float | None,
-    av_mag: float | None,
-    av_error_mag: float | None,
-    band: str,
-    as_json: bool,
-    **magnitudes: float | None,
-) -> None:
-    """A diameter from magnitudes: two bands or more."""
-    from pinlight.faces.diameter import predict_diameter
+def diameter(file: Path | None, band: str, as_json: bool, **options: Any) -> None:
+    """A diameter from magnitudes, two bands or more, or the diameters of a table of stars."""
+    from pinlight.faces.diameter import StarRow, predict_diameter, predict_rows, read_stars
 
-    if (ra_deg is None) != (dec_deg is None):
-        raise InputError(f"{'dec_deg' if dec_deg is None else 'ra_deg'} is missing; give both or neither")
-    given = {key: value for key, value in magnitudes.items() if value is not None}
-    answer = predict_diameter(
-        {key: value for key, value in given.items() if not key.endswith("_error")},
-        {key.removesuffix("_error"): value for key, value in given.items() if key.endswith("_error")},
-        spectral_type=spectral_type,
-        parallax_mas=parallax_mas,
-        position_deg=None if ra_deg is None or dec_deg is None else (ra_deg, dec_deg),
-        av_mag=av_mag,
-        av_error_mag=av_error_mag,
-        band=band,
-    )
+    given = {key: value for key, value in options.items() if value not in (None, "")}
+    if file is not None:
+        if given:
+            raise InputError(f"from and {next(iter(given))} are both given; give one or the other")
+        rows = read_stars(file)
+        found = iter(predict_rows([row for row in rows if isinstance(row, StarRow)], band))
+        answers = [
+            next(found) if isinstance(row, StarRow) else {"name": row[0], "diameter": None, "reason": row[1]}
+            for row in rows
+        ]
+    else:
+        errors = {key.removesuffix("_error"): given.pop(key) for key in list(given) if key.endswith("_error")}
+        magnitudes = {key: given.pop(key) for key in list(given) if key in _BANDS}
+        place = (given.pop("ra_deg", None), given.pop("dec_deg", None))
+        if (place[0] is None) != (place[1] is None):
+            raise InputError(f"{'dec_deg' if place[1] is None else 'ra_deg'} is missing; give both or neither")
+        position = None if place[0] is None else place
+        answers = [predict_diameter(magnitudes, errors, position_deg=position, band=band, **given)]
     if as_json:
-        _print_json(answer)
+        _print_json(answers if file is not None else answers[0])
         return
-    from pinlight.faces.show import show_diameter
+    from pinlight.faces.show import show_diameter, show_diameters
 
-    show_diameter(answer)
+    if file is None:
+        show_diameter(answers[0])
+    else:
+        show_diameters(answers)
 
 
 @main.group()

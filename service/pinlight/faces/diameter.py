@@ -1,12 +1,14 @@
-"""A diameter from magnitudes."""
+"""Diameters from magnitudes: of one star, or of a table of stars."""
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 
 from pinlight.diameters.limb_darkening import coefficients_at, uniform_disk_ratio
-from pinlight.diameters.prediction import StarPhotometry, predict_diameters
+from pinlight.diameters.prediction import Diameters, StarPhotometry, predict_diameters
 from pinlight.diameters.relations import load_relations
 from pinlight.errors import InputError
 from pinlight.photometry.bands import band as band_of
@@ -14,10 +16,159 @@ from pinlight.photometry.bands import check_magnitude, default_errors, saturatio
 from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.sky.positions import check_position, galactic_latitude_deg
 
-__all__ = ["predict_diameter"]
+__all__ = ["StarRow", "predict_diameter", "predict_rows", "read_stars"]
 
 # A_V and its error at a place and parallax.
 ExtinctionMap = Callable[[float, float, float], tuple[float, float]]
+
+_NUMBERS = ("parallax_mas", "ra_deg", "dec_deg", "av_mag", "av_error_mag")
+
+
+@dataclass(frozen=True)
+class StarRow:
+    """One star: magnitudes and their errors by band, and what else is known of it.
+
+    Raises
+    ------
+    InputError
+        If fewer than two bands are given or a value is impossible.
+    """
+
+    magnitudes: dict[str, float]
+    errors: dict[str, float] = field(default_factory=dict)
+    name: str = ""
+    spectral_type: str = ""
+    parallax_mas: float | None = None
+    ra_deg: float | None = None
+    dec_deg: float | None = None
+    av_mag: float | None = None
+    av_error_mag: float | None = None
+
+    def __post_init__(self) -> None:
+        for key, value in self.magnitudes.items():
+            check_magnitude(key, value)
+            if key not in CATALOGUE_BANDS:
+                raise InputError(
+                    f"band {key} is not used by any relation yet; give {', '.join(CATALOGUE_BANDS)}"
+                )
+        for key, value in self.errors.items():
+            if not 0 < value < 5:
+                raise InputError(f"{key}_error is {value:g}; it must be positive and below 5 mag")
+            if key not in self.magnitudes:
+                raise InputError(f"{key}_error is given without {key}")
+        if len(self.magnitudes) < 2:
+            raise InputError(f"{len(self.magnitudes)} magnitude is given; a colour takes at least two bands")
+        if self.parallax_mas is not None and not 0 < self.parallax_mas < 1000:
+            raise InputError(f"parallax_mas is {self.parallax_mas:g}; it must lie between 0 and 1000")
+        for key, extinction in (("av_mag", self.av_mag), ("av_error_mag", self.av_error_mag)):
+            if extinction is not None and not 0 <= extinction < 50:
+                raise InputError(f"{key} is {extinction:g}; it must lie between 0 and 50")
+        if (self.ra_deg is None) != (self.dec_deg is None):
+            missing = "dec_deg" if self.dec_deg is None else "ra_deg"
+            raise InputError(f"{missing} is missing; give both or neither")
+        if self.ra_deg is not None and self.dec_deg is not None:
+            check_position(self.ra_deg, self.dec_deg)
+
+    @property
+    def galactic_latitude_deg(self) -> float:
+        """Where the extinction prior is asked; the pole for a star without a position."""
+        if self.ra_deg is None or self.dec_deg is None:
+            return 90.0
+        return float(galactic_latitude_deg(self.ra_deg, self.dec_deg))
+
+
+def predict_rows(rows: Sequence[StarRow], band: str = "Ks") -> list[dict[str, Any]]:
+    """Diameters of many stars at once, ready for JSON.
+
+    An error that is not given takes its band's default. Without a spectral type, parallax and
+    colour tell a dwarf from a giant. Without an extinction the prior is taken, or none where
+    there is no parallax.
+
+    Parameters
+    ----------
+    rows : sequence of StarRow
+    band : str
+        Where the uniform-disc diameter is wanted.
+
+    Returns
+    -------
+    answers : list of dict
+        ``diameter`` is None and ``reason`` says why where no relation applies.
+
+    Raises
+    ------
+    InputError
+        If `band` is unknown.
+    """
+    wavelength_um = band_of(band).wavelength_um
+    if not rows:
+        return []
+
+    def column(values: list[float | None]) -> Any:
+        return np.array([np.nan if value is None else value for value in values], dtype=float)
+
+    magnitudes = np.array([[row.magnitudes.get(key, np.nan) for key in CATALOGUE_BANDS] for row in rows])
+    own = np.array([[row.errors.get(key, np.nan) for key in CATALOGUE_BANDS] for row in rows])
+    assumed, saturated = (
+        np.stack([function(key, magnitudes[:, i]) for i, key in enumerate(CATALOGUE_BANDS)], axis=1)
+        for function in (default_errors, saturation_errors)
+    )
+    given = np.isfinite(own)
+    # Without a distance the prior would put the star behind all the dust there is.
+    av = [0.0 if row.av_mag is None and row.parallax_mas is None else row.av_mag for row in rows]
+    result = predict_diameters(
+        StarPhotometry(
+            magnitudes=magnitudes,
+            errors=np.where(given, own, assumed),
+            # An error of one's own says that the photometry is not the saturated survey's.
+            shared_errors=np.where(given, 0.0, saturated),
+            spectral_types=[row.spectral_type for row in rows],
+            parallax_mas=column([row.parallax_mas for row in rows]),
+            galactic_latitude_deg=column([row.galactic_latitude_deg for row in rows]),
+            av_mag=column(av),
+            av_error_mag=column([row.av_error_mag for row in rows]),
+        ),
+        load_relations(),
+    )
+    ratio = uniform_disk_ratio(coefficients_at(wavelength_um, result.limb_darkening))
+    return [_answer(row, result, index, band, float(ratio[index])) for index, row in enumerate(rows)]
+
+
+def _answer(row: StarRow, result: Diameters, index: int, band: str, ratio: float) -> dict[str, Any]:
+    theta = float(result.limb_darkened_mas[index])
+    group = str(result.luminosity_group[index])
+    if not np.isfinite(theta):
+        kind = group or "star of this type"
+        reason = f"no published relation applies to a {kind} with these colours"
+        return {"name": row.name, "diameter": None, "reason": reason}
+    used = result.relations_used(index)
+    return {
+        "name": row.name,
+        "diameter": {
+            "limb_darkened_mas": round(theta, 5),
+            "uniform_disk_mas": round(theta * ratio, 5),
+            "band": band,
+            "own_error_mas": round(float(result.own_error_mas[index]), 5),
+            "shared_error_mas": round(float(result.shared_error_mas[index]), 5),
+            "error_mas": round(float(result.error_mas[index]), 5),
+            "relations": used,
+            "discordant": bool(result.discordant[index]),
+        },
+        "luminosity_group": group,
+        "av_mag": round(float(result.av_mag[index]), 4),
+        "av_error_mag": round(float(result.av_error_mag[index]), 4),
+        "teff_k": round(float(result.teff_k[index])),
+        "relation_set": result.relation_set.hash,
+        "parts": [
+            {
+                "relation": relation,
+                "diameter_mas": round(float(10 ** result.log_thetas[index, place]), 5),
+                "weight": round(float(result.weights[index, place]), 4),
+            }
+            for place, relation in enumerate(result.relation_set.names)
+            if relation in used
+        ],
+    }
 
 
 def predict_diameter(
@@ -33,16 +184,13 @@ def predict_diameter(
     band: str = "Ks",
     name: str = "",
 ) -> dict[str, Any]:
-    """A diameter from magnitudes, and how it came about, ready for JSON.
+    """A diameter from magnitudes, and how it came about, ready for JSON; see `predict_rows`.
 
     Parameters
     ----------
     magnitudes, errors : dict
-        Band -> magnitude; an error that is not given takes the band's default.
-    spectral_type : str, optional
-        Without one, parallax and colour tell a dwarf from a giant.
-    parallax_mas, position_deg : optional
-        For the extinction prior; without a parallax no extinction is assumed.
+        Band -> magnitude, and its error.
+    spectral_type, parallax_mas, position_deg : optional
     av_mag, av_error_mag : float, optional
         In place of the prior; without an error max(0.05, 0.5 A_V) is taken.
     extinction_map : function of ra_deg, dec_deg, parallax_mas, optional
@@ -56,79 +204,79 @@ def predict_diameter(
     InputError
         If fewer than two bands are given, a value is impossible, or no relation applies.
     """
-    errors = errors or {}
-    for key, value in magnitudes.items():
-        check_magnitude(key, value)
-        if key not in CATALOGUE_BANDS:
-            raise InputError(f"band {key} is not used by any relation yet; give {', '.join(CATALOGUE_BANDS)}")
-    for key, value in errors.items():
-        if not 0 < value < 5:
-            raise InputError(f"{key}_error is {value:g}; it must be positive and below 5 mag")
-        if key not in magnitudes:
-            raise InputError(f"{key}_error is given without {key}")
-    if len(magnitudes) < 2:
-        raise InputError(f"{len(magnitudes)} magnitude is given; a colour takes at least two bands")
-    if parallax_mas is not None and not 0 < parallax_mas < 1000:
-        raise InputError(f"parallax_mas is {parallax_mas:g}; it must lie between 0 and 1000")
+    ra_deg, dec_deg = position_deg or (None, None)
     if av_mag is None and extinction_map is not None and position_deg is not None and parallax_mas is not None:
         av_mag, av_error_mag = extinction_map(*position_deg, parallax_mas)
-    for key, extinction in (("av_mag", av_mag), ("av_error_mag", av_error_mag)):
-        if extinction is not None and not 0 <= extinction < 50:
-            raise InputError(f"{key} is {extinction:g}; it must lie between 0 and 50")
-    # Without a distance the prior would put the star behind all the dust there is.
-    av = (0.0 if parallax_mas is None else np.nan) if av_mag is None else av_mag
-    latitude = 90.0 if position_deg is None else float(galactic_latitude_deg(*check_position(*position_deg)))
-    values = np.array([[magnitudes.get(key, np.nan) for key in CATALOGUE_BANDS]])
-    assumed = np.stack([default_errors(key, values[:, i]) for i, key in enumerate(CATALOGUE_BANDS)], axis=1)
-    saturated = np.stack(
-        [saturation_errors(key, values[:, i]) for i, key in enumerate(CATALOGUE_BANDS)], axis=1
+    row = StarRow(
+        magnitudes, errors or {}, name, spectral_type, parallax_mas, ra_deg, dec_deg, av_mag, av_error_mag
     )
-    own = np.array([[errors.get(key, np.nan) for key in CATALOGUE_BANDS]])
-    relation_set = load_relations()
-    result = predict_diameters(
-        StarPhotometry(
-            magnitudes=values,
-            errors=np.where(np.isfinite(own), own, assumed),
-            # An error of one's own says that the photometry is not the saturated survey's.
-            shared_errors=np.where(np.isfinite(own), 0.0, saturated),
-            spectral_types=[spectral_type],
-            parallax_mas=np.array([np.nan if parallax_mas is None else parallax_mas]),
-            galactic_latitude_deg=np.array([latitude]),
-            av_mag=np.array([av]),
-            av_error_mag=np.array([np.nan if av_error_mag is None else av_error_mag]),
-        ),
-        relation_set,
-    )
-    theta = float(result.limb_darkened_mas[0])
-    if not np.isfinite(theta):
-        kind = str(result.luminosity_group[0]) or "star of this type"
-        raise InputError(f"no published relation applies to a {kind} with these colours")
-    u = float(coefficients_at(band_of(band).wavelength_um, result.limb_darkening)[0])
-    used = result.relations_used(0)
-    return {
-        "name": name,
-        "diameter": {
-            "limb_darkened_mas": round(theta, 5),
-            "uniform_disk_mas": round(theta * float(uniform_disk_ratio(u)), 5),
-            "band": band,
-            "own_error_mas": round(float(result.own_error_mas[0]), 5),
-            "shared_error_mas": round(float(result.shared_error_mas[0]), 5),
-            "error_mas": round(float(result.error_mas[0]), 5),
-            "relations": used,
-            "discordant": bool(result.discordant[0]),
-        },
-        "luminosity_group": str(result.luminosity_group[0]),
-        "av_mag": round(float(result.av_mag[0]), 4),
-        "av_error_mag": round(float(result.av_error_mag[0]), 4),
-        "teff_k": round(float(result.teff_k[0])),
-        "relation_set": relation_set.hash,
-        "parts": [
-            {
-                "relation": relation,
-                "diameter_mas": round(float(10 ** result.log_thetas[0, index]), 5),
-                "weight": round(float(result.weights[0, index]), 4),
-            }
-            for index, relation in enumerate(relation_set.names)
-            if relation in used
-        ],
-    }
+    [answer] = predict_rows([row], band)
+    if answer["diameter"] is None:
+        raise InputError(answer["reason"])
+    return answer
+
+
+def read_stars(path: Path) -> list[StarRow | tuple[str, str]]:
+    """Stars of a table file: CSV, ECSV, VOTable or FITS.
+
+    Columns are named by band (``V``, ``V_error``, ``Ks``, …), and ``name``, ``spectral_type``,
+    ``parallax_mas``, ``ra_deg``, ``dec_deg``, ``av_mag``, ``av_error_mag``; all but two bands are
+    optional, and blanks count as not given. Other columns are passed over.
+
+    Returns
+    -------
+    rows : list
+        A StarRow, or a name and the reason why it is none, for each row of the file.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read or has fewer than two columns of magnitudes.
+    """
+    from astropy.table import Table
+
+    kinds = {".csv": "ascii.csv", ".ecsv": "ascii.ecsv", ".vot": "votable", ".xml": "votable", ".fits": "fits"}
+    kind = kinds.get(path.suffix.lower())
+    if kind is None:
+        raise InputError(f"{path} may end in one of {', '.join(kinds)}, to tell what it is")
+    try:
+        table = Table.read(path, format=kind)
+    except Exception as error:  # astropy's readers raise whatever their parsers do
+        reason = getattr(error, "strerror", None) or str(error).splitlines()[0][:120]
+        raise InputError(f"cannot read {path} as {kind.rpartition('.')[2]}: {reason}") from error
+    bands = [name for name in table.colnames if name in CATALOGUE_BANDS]
+    if len(bands) < 2:
+        found = ", ".join(table.colnames)[:80]
+        raise InputError(f"{path} has columns {found}; it needs two or more of {', '.join(CATALOGUE_BANDS)}")
+    return [_row(dict(zip(table.colnames, values, strict=True)), bands) for values in table.iterrows()]
+
+
+def _row(cells: dict[str, Any], bands: list[str]) -> StarRow | tuple[str, str]:
+    def text(key: str) -> str:
+        value = cells.get(key, "")
+        if value is np.ma.masked:
+            return ""
+        return value.decode() if isinstance(value, bytes) else str(value).strip()
+
+    def number(key: str) -> float | None:
+        written = text(key)
+        if written in ("", "nan", "--"):
+            return None
+        try:
+            return float(written)
+        except ValueError as error:
+            raise InputError(f"{key} is {written!r}; it must be a number") from error
+
+    def known(keys: dict[str, str]) -> dict[str, float]:
+        return {band: value for band, key in keys.items() if (value := number(key)) is not None}
+
+    try:
+        return StarRow(
+            known({band: band for band in bands}),
+            known({band: f"{band}_error" for band in bands}),
+            text("name"),
+            text("spectral_type"),
+            **{key: number(key) for key in _NUMBERS},
+        )
+    except InputError as error:
+        return text("name"), str(error)

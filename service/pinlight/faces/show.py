@@ -15,7 +15,7 @@ from pinlight.ranking.result import Ranking
 from pinlight.sky.time import format_utc
 from pinlight.sky.windows import Window
 
-__all__ = ["show_diameter", "show_plan", "show_ranking", "show_star", "show_track"]
+__all__ = ["show_diameter", "show_diameters", "show_plan", "show_ranking", "show_star", "show_track"]
 
 _SHORT = {"diameter": "diam.", "brightness": "bright.", "companion": "comp."}
 _CAUTION = (
@@ -145,6 +145,26 @@ def show_diameter(answer: dict[str, Any]) -> None:
         console.print("[bold]discordant[/bold]: its colours disagree about its diameter")
     for part in answer["parts"]:
         console.print(f"  {part['relation']:<14}{part['diameter_mas']:8.4f} mas   weight {part['weight']:+.3f}")
+
+
+def show_diameters(answers: list[dict[str, Any]]) -> None:
+    """Diameters of many stars, a line each."""
+    console = _console()
+    table = Table(box=None, pad_edge=False, header_style="dim")
+    for heading in ("star", "limb-darkened mas", "uniform mas", "as a", "relations"):
+        table.add_column(heading, justify="right" if heading.endswith("mas") else "left")
+    for number, answer in enumerate(answers, start=1):
+        name, found = escape(answer["name"] or f"row {number}"), answer["diameter"]
+        if found is None:
+            table.add_row(name, "–", "–", "", escape(answer["reason"]))
+            continue
+        remark = "discordant; " if found["discordant"] else ""
+        table.add_row(
+            name, f"{found['limb_darkened_mas']:.4f} ± {found['error_mas']:.4f}",
+            f"{found['uniform_disk_mas']:.4f}", answer["luminosity_group"],
+            remark + ", ".join(found["relations"]),
+        )  # fmt: skip
+    console.print(table)
 
 
 def show_track(answer: dict[str, Any]) -> None:
