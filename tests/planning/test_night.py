@@ -7,8 +7,11 @@ from pinlight.errors import InputError
 from pinlight.faces.library import plan_night as plan
 from pinlight.faces.models import PlanAnswer
 from pinlight.faces.targets import read_requests
-from pinlight.planning.night import Request
+from pinlight.fringes.companions import suspected_companion_error
+from pinlight.planning.night import Request, _star_errors
+from pinlight.ranking.budget import fixed_terms
 from pinlight.ranking.clock import night_clock
+from pinlight.ranking.columns import flag_bits
 from pinlight.ranking.setup import setup_of
 from pinlight.ranking.target import Target
 from pinlight.resources import seed_folder
@@ -86,6 +89,20 @@ def test_every_block_satisfies_every_constraint(night, catalogue, north, request
         if placed.get(request.target.name, 0) < request.repeats:
             assert request.target.name in missing
     assert night.objective <= night.bound + 1e-9
+
+
+def test_a_plan_charges_a_calibrator_for_its_companions_as_a_ranking_does(catalogue, north):
+    columns, setup = catalogue.columns(), setup_of(north, None, "H")
+    component = np.uint64(flag_bits("component"))
+    rows = np.flatnonzero(((columns.flags & component) != 0) & np.isfinite(columns.diameter_mas))
+    rows = rows[(columns.dec_deg[rows] > 0) & np.isfinite(columns.magnitudes["H"][rows])][:50]
+    clock = night_clock(north, north.station, NIGHT)
+    errors = _star_errors(columns, rows, setup, Target(30.0, 20.0), clock, clock.times[len(clock.times) // 2])
+    companion = fixed_terms(columns, rows, np.zeros(len(rows)), setup, None)["companion"]
+    alone = ~np.isin(rows, columns.companion_rows)
+    assert alone.any()
+    assert companion[alone] == pytest.approx(suspected_companion_error())
+    assert (errors.star_variance >= companion**2 * (1 - 1e-9)).all()
 
 
 def test_the_json_is_the_documented_one(night):

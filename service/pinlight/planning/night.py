@@ -287,9 +287,8 @@ def _star_errors(
     ra, dec = clock.apparent(stars.ra_deg[rows], stars.dec_deg[rows], (pm_ra, pm_dec, parallax, velocity))
     delays = clock.delays_m(ra, dec, np.full(len(rows), when))
     lengths = np.sqrt(np.maximum(clock.baseline_lengths_m[:, None] ** 2 - delays**2, 0.0)).T
-    companion = np.zeros(len(rows))
     magnitude = target.magnitudes.get(setup.band)
-    fixed = fixed_terms(stars, rows, np.zeros(len(rows)), setup, magnitude, companion) | {"drift": None}
+    fixed = fixed_terms(stars, rows, np.zeros(len(rows)), setup, magnitude) | {"drift": None}
     budget = error_budget(stars, rows, setup, fixed, "rms", lengths)
 
     def square(name: str) -> Floats:

@@ -7,10 +7,10 @@ from numpy.typing import NDArray
 
 from pinlight.diameters.limb_darkening import coefficients_at
 from pinlight.errors import InputError
-from pinlight.fringes.companions import companion_error
+from pinlight.fringes.companions import companion_error, suspected_companion_error
 from pinlight.fringes.noise import snr_of_v2
 from pinlight.fringes.visibility import channel_average
-from pinlight.ranking.columns import StarColumns
+from pinlight.ranking.columns import StarColumns, flag_bits
 from pinlight.ranking.setup import Setup
 
 __all__ = [
@@ -18,10 +18,10 @@ __all__ = [
     "SECOND_LOBE_V2",
     "TERMS",
     "Budget",
-    "companion_terms",
     "drift_error",
     "error_budget",
     "fixed_terms",
+    "known_companion_terms",
     "lowest_v2",
 ]
 
@@ -31,6 +31,8 @@ TERMS = ("diameter", "photon", "drift", "brightness", "companion", "shape")
 JUDGES = ("rms", "worst")
 # No V^2 of a disc, limb-darkened or not, exceeds this past its first null.
 SECOND_LOBE_V2 = 0.0175
+
+_COMPONENT = flag_bits("component")
 
 
 @dataclass(frozen=True)
@@ -87,15 +89,15 @@ def drift_error(
     return np.sqrt(2) * spread * np.sqrt(-np.expm1(-interval_min / time_min - separation_deg / angle_deg))
 
 
-def companion_terms(stars: StarColumns, rows: NDArray[np.int64], band: str, field_arcsec: float) -> Floats:
+def known_companion_terms(stars: StarColumns, rows: NDArray[np.int64], setup: Setup) -> Floats:
     """The error of each star's known companions inside the field, shape of `rows`."""
     variance = np.zeros(len(rows))
     first = np.searchsorted(stars.companion_rows, rows, side="left")
     last = np.searchsorted(stars.companion_rows, rows, side="right")
-    deltas = stars.companion_deltas_mag["V" if band in ("B", "V") else "Ks"]
+    deltas = stars.companion_deltas_mag["V" if setup.band in ("B", "V") else "Ks"]
     for index in np.flatnonzero(last > first):
         known = slice(first[index], last[index])
-        inside = stars.companion_separations_arcsec[known] <= field_arcsec
+        inside = stars.companion_separations_arcsec[known] <= setup.field_arcsec
         delta = np.where(
             np.isfinite(deltas[known]), deltas[known], stars.companion_deltas_mag["V"][known]
         ).astype(float)
@@ -109,7 +111,6 @@ def fixed_terms(
     separations_deg: Floats,
     setup: Setup,
     target_magnitude: float | None,
-    companion: Floats,
 ) -> dict[str, Floats | None]:
     """The terms that are the same on all baselines and channels: drift, brightness, companion.
 
@@ -121,13 +122,15 @@ def fixed_terms(
     setup : Setup
     target_magnitude : float or None
         In the setup's band; None leaves the brightness term out.
-    companion : array, shape (N,)
-        The companion term, known and suspected companions together.
 
     Returns
     -------
     terms : term -> array, shape (N,), or None where it cannot be computed
+        The companion term is that of known and suspected companions together.
     """
+    # A listed component whose neighbour the catalogue knows is no longer a mere suspicion.
+    suspected = ((stars.flags[rows] & np.uint64(_COMPONENT)) != 0) & ~np.isin(rows, stars.companion_rows)
+    companion = np.hypot(known_companion_terms(stars, rows, setup), suspected * suspected_companion_error())
     terms: dict[str, Floats | None] = {"drift": None, "brightness": None, "companion": companion}
     drift = setup.drift
     if drift is not None and setup.look_interval_min is not None:

@@ -3,8 +3,7 @@
 import numpy as np
 from numpy.typing import NDArray
 
-from pinlight.fringes.companions import suspected_companion_error
-from pinlight.ranking.budget import companion_terms
+from pinlight.ranking.budget import known_companion_terms
 from pinlight.ranking.columns import StarColumns, flag_bits
 from pinlight.ranking.setup import Setup, Thresholds
 from pinlight.ranking.target import Target
@@ -51,7 +50,6 @@ _UNSTEADY = flag_bits(
     "irregular r_crb be_star emission_line pre_main_sequence t_tauri carbon_star s_star wolf_rayet"
 )
 _DISCORDANT = flag_bits("discordant")
-_COMPONENT = flag_bits("component")
 
 
 def close_gates(
@@ -62,7 +60,7 @@ def close_gates(
     setup: Setup,
     limits: Thresholds,
     barred: frozenset[int],
-) -> tuple[NDArray[np.int64], NDArray[np.float64], NDArray[np.float64], dict[str, int]]:
+) -> tuple[NDArray[np.int64], NDArray[np.float64], dict[str, int]]:
     """Which stars of a cone pass every gate but that of V^2.
 
     Parameters
@@ -75,8 +73,8 @@ def close_gates(
 
     Returns
     -------
-    rows, separations_deg, companion : array, shape (N,)
-        Those that pass, with their companion term (known and suspected).
+    rows, separations_deg : array, shape (N,)
+        Those that pass.
     excluded : dict
         Reason -> number of stars of the cone.
     """
@@ -106,14 +104,11 @@ def close_gates(
     if barred:
         close("barred", np.isin(stars.ids[rows], list(barred)))
     close("close_binary", _has(stars, rows, _CLOSE_BINARY))
-    known = companion_terms(stars, rows, setup.band, setup.field_arcsec)
+    known = known_companion_terms(stars, rows, setup)
     close("companion", _has(stars, rows, _DOUBLE) | (known > COMPANION_LIMIT))
     close("variable", _has(stars, rows, _UNSTEADY))
     close("discordant", _has(stars, rows, _DISCORDANT))
-    known = companion_terms(stars, rows, setup.band, setup.field_arcsec)
-    # A listed component whose neighbour the catalogue knows is no longer a mere suspicion.
-    suspected = _has(stars, rows, _COMPONENT) & ~np.isin(rows, stars.companion_rows)
-    return rows, separations_deg, np.hypot(known, suspected * suspected_companion_error()), excluded
+    return rows, separations_deg, excluded
 
 
 def _has(stars: StarColumns, rows: NDArray[np.int64], bits: int) -> NDArray[np.bool_]:

@@ -151,9 +151,7 @@ def _assess(
     most: int,
 ) -> _Ranked:
     """Gates and budget of some stars, those that pass in order of their error."""
-    rows, separations, companion, excluded = close_gates(
-        stars, rows, separations, target, setup, limits, barred
-    )
+    rows, separations, excluded = close_gates(stars, rows, separations, target, setup, limits, barred)
     together = None
     if reach is not None:
         together = reach.stars(stars, rows)
@@ -161,13 +159,13 @@ def _assess(
         for reason, failing in (("not_up", ~together.up), ("out_of_reach", together.up & ~in_reach)):
             if failing.any():
                 excluded[reason] = int(failing.sum())
-        rows, separations, companion = rows[in_reach], separations[in_reach], companion[in_reach]
+        rows, separations = rows[in_reach], separations[in_reach]
         together = together.only(in_reach)
         lengths_m = together.baselines_m
     else:
         lengths_m = np.broadcast_to(setup.baselines_m, (len(rows), len(setup.baselines)))
     longest = lengths_m.max(axis=1)
-    fixed = fixed_terms(stars, rows, separations, setup, target.magnitudes.get(setup.band), companion)
+    fixed = fixed_terms(stars, rows, separations, setup, target.magnitudes.get(setup.band))
     order, budget, resolved = _in_order(stars, rows, setup, fixed, judge, lengths_m, limits.v2_min, most)
     if resolved:
         excluded["resolved"] = resolved
