@@ -3,6 +3,7 @@
 import numpy as np
 import pytest
 
+from pinlight.errors import InputError
 from pinlight.faces.library import rank as rank_named
 from pinlight.ranking.clock import night_clock, span_clock
 from pinlight.ranking.rank import rank
@@ -85,6 +86,26 @@ def test_a_star_that_is_not_up_and_one_out_of_reach_are_told_apart(north):
     found = rank(stars, TARGET, setup, limits=limits, clock=clock)
     assert found.excluded == {"not_up": 1, "out_of_reach": 1}
     assert [c.star_id for c in found.calibrators] == [1]
+
+
+def test_stars_that_are_never_up_together_are_no_set(north):
+    stations = [s.model_copy(update={"cart_m": 500.0}) for s in north.station[:3]]
+    array = north.model_copy(update={"station": tuple(stations)})
+    setup = setup_of(array, None, "H")
+    limits = setup.limits.replace(separation_max_deg=180.0)
+    clock = night_clock(array, array.station, "2026-12-01")
+    evening, midnight, morning = ({"ra_deg": ra, "dec_deg": 30.0} for ra in (330.0, 75.0, 190.0))
+    target = Target(75.0, 80.0)
+    apart = rank(columns([evening, morning]), target, setup, limits=limits, clock=clock)
+    assert len(apart.calibrators) == 2
+    assert apart.calibrators[0].windows[-1][1] < apart.calibrators[1].windows[0][0] or (
+        apart.calibrators[1].windows[-1][1] < apart.calibrators[0].windows[0][0]
+    )
+    assert [len(one.star_ids) for one in apart.best_sets] == [1]
+    with pytest.raises(InputError, match="never in reach together with the target under one coarse"):
+        rank(columns([evening, morning]), target, setup, limits=limits, clock=clock, with_ids=[1, 2])
+    three = rank(columns([evening, midnight, morning]), target, setup, limits=limits, clock=clock)
+    assert [len(one.star_ids) for one in three.best_sets] == [1, 2]
 
 
 @pytest.mark.parametrize(

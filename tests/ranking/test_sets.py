@@ -73,6 +73,29 @@ def test_the_best_subset_is_that_of_an_exhaustive_search(trial):
         assert variance == pytest.approx(everything[winner], rel=1e-9)
 
 
+@pytest.mark.parametrize("trial", range(10))
+def test_members_of_a_set_have_a_moment_in_common(trial):
+    random = np.random.default_rng(80 + trial)
+    field, errors = looks(random, 8)
+    covariance, to_target = field[:-1, :-1] + errors, field[:-1, -1]
+    moments = random.random((8, 70)) < 0.12
+    best = best_subsets(covariance, covariance, to_target, 0.04**2, moments=moments)
+    for size in (1, 2, 3, 4):
+        possible = {
+            subset: float(
+                kriging_variance(covariance[np.ix_(subset, subset)], to_target[list(subset)], 0.04**2)[0]
+            )
+            for subset in combinations(range(8), size)
+            if any(all(moments[member, time] for member in subset) for time in range(70))
+        }
+        if not possible:
+            assert len(best) < size
+            continue
+        members, variance = best[size - 1]
+        assert variance == pytest.approx(min(possible.values()), rel=1e-9)
+        assert members in possible
+
+
 @given(st.integers(0, 10_000), st.integers(1, 7))
 @settings(max_examples=60, deadline=None)
 def test_the_error_never_grows_when_a_calibrator_is_added(seed, count):

@@ -46,7 +46,8 @@ def show_ranking(ranking: Ranking, most: int | None = None) -> None:
     headings = ["", "star", "error %", *term_headings, "sep deg", "type", setup.band, "diameter mas"]
     if ranking.span is not None:
         headings.append("UTC")
-        console.print(f"in reach {_hours(ranking.target_windows)} UTC, from {format_utc(ranking.span[0])}")
+        hours = _hours(ranking.target_windows)
+        console.print(f"in reach {hours} UTC in one coarse setting, from {format_utc(ranking.span[0])}")
     for heading in headings:
         left = heading in ("star", "type", "mostly")
         bold = "bold" if heading == "error %" else ""

@@ -112,10 +112,11 @@ def rank(
         for index in range(min(best, len(ranked.rows)))
     ]
     members = np.arange(min(SET_CANDIDATES, len(ranked.rows)))
-    sets = _best_sets(stars, ranked, target, setup, judge, members)
+    moments = _moments(stars, ranked, reach, members)
+    sets = _best_sets(stars, ranked, target, setup, judge, members, moments)
     named = None
     if with_ids:
-        named = _named_set(stars, target, setup, judge, limits, with_ids, assess)
+        named = _named_set(stars, target, setup, judge, limits, with_ids, assess, reach)
     return Ranking(
         edition=stars.edition,
         pinlight=__version__,
@@ -298,12 +299,28 @@ def _set_covariance(
     return errors + field, errors + field * apart, to_target, drift.spread**2
 
 
+def _moments(
+    stars: StarColumns, ranked: _Ranked, reach: TargetReach | None, members: NDArray[np.int64]
+) -> NDArray[np.bool_] | None:
+    """When some ranked stars are in reach, shape (M, ...), under each coarse setting that any has."""
+    if reach is None or ranked.reach is None or not len(members):
+        return None
+    return reach.together(stars, ranked.rows[members], np.unique(ranked.reach.choice[members]))
+
+
 def _best_sets(
-    stars: StarColumns, ranked: _Ranked, target: Target, setup: Setup, judge: str, members: NDArray[np.int64]
+    stars: StarColumns,
+    ranked: _Ranked,
+    target: Target,
+    setup: Setup,
+    judge: str,
+    members: NDArray[np.int64],
+    moments: NDArray[np.bool_] | None,
 ) -> list[CalibratorSet]:
     if not len(members):
         return []
-    found = best_subsets(*_set_covariance(stars, ranked, target, setup, judge, members))
+    covariance = _set_covariance(stars, ranked, target, setup, judge, members)
+    found = best_subsets(*covariance, moments=moments)
     return [
         CalibratorSet(tuple(int(stars.ids[ranked.rows[member]]) for member in subset), float(np.sqrt(variance)))
         for subset, variance in found
@@ -318,6 +335,7 @@ def _named_set(
     limits: Thresholds,
     with_ids: Sequence[int],
     assess: Callable[[NDArray[np.int64], NDArray[np.float64]], _Ranked],
+    reach: TargetReach | None,
 ) -> CalibratorSet:
     """The error of a set that the caller named, or an error that says which gate a star fails."""
     members = []
@@ -337,6 +355,11 @@ def _named_set(
     rows, separations = np.array(members).T
     ranked = assess(rows.astype(np.int64), separations)
     everyone = np.arange(len(members))
+    moments = _moments(stars, ranked, reach, everyone)
+    if moments is not None and not moments.all(axis=0).any():
+        raise InputError(
+            "with names stars that are never in reach together with the target under one coarse setting"
+        )
     covariance = _set_covariance(stars, ranked, target, setup, judge, everyone)
     variance = subset_variances(*covariance, everyone[None])[0]
     return CalibratorSet(tuple(int(stars.ids[row]) for row in ranked.rows), float(np.sqrt(variance)))

@@ -96,6 +96,17 @@ class TargetReach:
         up = np.asarray(observable.any(axis=1))
         return StarsReach(up, times, choice, projected.reshape(len(rows), samples))
 
+    def together(self, columns: StarColumns, rows: NDArray[np.int64], choices: NDArray[np.int64]) -> Bools:
+        """Which stars are in reach at each time under each of some settings, shape (N, C T)."""
+        clock, lines = self.clock, self.clock.delay_lines
+        ra, dec = self._places(columns, rows)
+        observable = clock.observable(ra[:, None], dec[:, None], clock.times) & self.observable
+        delays = clock.delays_m(ra[:, None], dec[:, None], clock.times)
+        options = [self.choices[index] for index in choices]
+        return np.concatenate(
+            [lines.with_settings(one.settings, delays) & observable & one.in_reach for one in options], axis=1
+        )
+
     def _places(self, columns: StarColumns, rows: NDArray[np.int64]) -> tuple[Floats, Floats]:
         pm_ra, pm_dec, parallax, velocity = columns.motion(rows)
         return self.clock.apparent(

@@ -114,7 +114,8 @@ class Ranking:
 
     `excluded` counts every star of the edition that failed a gate, by reason; with the
     `ranked` stars, of which the best are `calibrators`, it adds up to `stars`. `best_sets` has
-    the best set of each size from 1; `named_set` is one that the caller asked for. With a clock,
+    the best set of each size from 1, with a clock only of stars that are in reach at one time under
+    one coarse setting; `named_set` is one that the caller asked for. With a clock,
     `span` is the time looked at, `target_windows` are the target's, and `coarse_paths_m` the
     coarse delay settings that give it its longest one. `names` are the names of the stars in sets.
     """

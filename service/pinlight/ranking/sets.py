@@ -17,6 +17,7 @@ __all__ = [
 ]
 
 Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
 
 LARGEST_SET = 4
 _CHUNK = 4096  # subsets at a time: their arrays then stay in the processor's cache
@@ -164,16 +165,31 @@ def _all_subsets(count: int, size: int) -> NDArray[np.int64]:
 
 
 def best_subsets(
-    same_side: Floats, other_side: Floats, to_target: Floats, sill: float, largest: int = LARGEST_SET
+    same_side: Floats,
+    other_side: Floats,
+    to_target: Floats,
+    sill: float,
+    largest: int = LARGEST_SET,
+    moments: Bools | None = None,
 ) -> list[tuple[tuple[int, ...], float]]:
     """The best subset of each size from 1, by trying all of them: members and variance.
 
-    Parameters as of `subset_variances`; members stand in the order of the rows.
+    Parameters as of `subset_variances`, and `moments`, shape (M, T): when each look is possible. A
+    subset needs a moment in common, and a size without any such subset is left out. Members stand in
+    the order of the rows.
     """
+    words = None
+    if moments is not None and not moments.all(axis=0).any():
+        packed = np.packbits(moments, axis=1)
+        words = np.pad(packed, ((0, 0), (0, -packed.shape[1] % 8))).view(np.uint64)
     count = len(to_target)
     best = []
     for size in range(1, min(largest, count) + 1):
         subsets = _all_subsets(count, size)
+        if words is not None:
+            subsets = subsets[np.bitwise_and.reduce(words[subsets], axis=1).any(axis=1)]
+            if not len(subsets):
+                break
         variances = subset_variances(same_side, other_side, to_target, sill, subsets)
         winner = int(variances.argmin())
         best.append((tuple(int(member) for member in subsets[winner]), float(variances[winner])))
