@@ -275,6 +275,22 @@ def test_a_paper_that_cannot_be_written_is_named(run, tmp_path):
     assert answer.stderr.splitlines()[-1].startswith("pinlight: cannot write ")
 
 
+def test_no_paper_takes_the_place_of_another_file(run, tmp_path):
+    path = tmp_path / "t.csv"
+    written = "name,ra_deg,dec_deg,H\nA,60,28,4\n"
+    path.write_text(written, encoding="utf-8")
+    answer = run("plan", path, *NIGHT, "--ics", tmp_path / "." / "t.csv")
+    assert answer.exit_code == 2
+    assert "--ics is" in answer.stderr
+    assert "which is also TARGETS" in answer.stderr
+    twice = run("plan", path, *NIGHT, "--csv", tmp_path / "n", "--ics", tmp_path / "n")
+    assert "which is also --csv" in twice.stderr
+    folder = run("plan", path, *NIGHT, "--csv", tmp_path)
+    assert folder.stderr.splitlines()[-1].endswith("it is no ordinary file")
+    assert path.read_text(encoding="utf-8") == written
+    assert sorted(tmp_path.iterdir()) == [path]
+
+
 def test_what_people_write_is_no_markup(run, tmp_path):
     path = tmp_path / "t.csv"
     path.write_text("name,ra_deg,dec_deg,H\n[/x],60,28,4\n[red]A,61,27,4\n", encoding="utf-8")

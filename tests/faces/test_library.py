@@ -95,6 +95,11 @@ def test_a_name_that_is_neither_star_nor_place(catalogue):
         ('name,ra_deg,dec_deg\n\n"A\nB",1,x\n', "line 4: dec_deg is 'x'"),
         ("name,ra_deg,dec_deg,repeats\nA,1,2,1.5\n", "repeats is 1.5; it must be a whole number"),
         ("name,ra_deg,dec_deg,from\nA,1,2,soon\n", "from is 'soon'; write UTC as"),
+        (
+            "name,ra_deg,dec_deg,from,to\nA,1,2,2026-12-02T05:00,2026-12-01T20:00\n",
+            "line 2: to of A is 2026-12-01T20:00:00Z; it must lie after from, 2026-12-02T05:00:00Z",
+        ),
+        ("name,ra_deg,dec_deg,priorty\nA,1,2,2\n", "has the column priorty; is it priority?"),
     ],
 )
 def test_a_wrong_targets_file_is_told_its_line(tmp_path, text, message):

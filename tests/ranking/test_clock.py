@@ -308,3 +308,9 @@ def test_a_date_without_rotation_data_is_noted(north):
     assert night_clock(north, north.station, "2026-10-01").notes == []
     for night in ("1970-01-05", "2100-01-05"):
         assert "No Earth-rotation data" in night_clock(north, north.station, night).notes[0]
+
+
+@pytest.mark.parametrize("step_min", [0.0, -1.0, float("nan"), float("inf"), 1e-9])
+def test_a_nights_impossible_step_is_named(north, step_min):
+    with pytest.raises(InputError, match="step_min is "):
+        night_clock(north, north.station, "2026-12-01", step_min)

@@ -327,18 +327,20 @@ def plan(
     from pinlight.faces.library import plan_night
     from pinlight.faces.targets import read_requests
 
+    papers_asked = {"--csv": csv_file, "--ics": ics_file, "--report": report_file}
+    taken = {targets.resolve(): "TARGETS"}
+    for option, path in papers_asked.items():
+        if path is not None and (other := taken.setdefault(path.resolve(), option)) != option:
+            raise InputError(f"{option} is {path}, which is also {other}; name another file")
     requests = read_requests(targets)
     night = plan_night(open_catalogue(db), requests, stations=_names(stations), **options)
-    if csv_file or ics_file or report_file:
+    if any(papers_asked.values()):
         from pinlight.faces import papers
 
-        for path, made in (
-            (csv_file, papers.plan_csv),
-            (ics_file, papers.plan_ics),
-            (report_file, papers.plan_page),
-        ):
+        made = {"--csv": papers.plan_csv, "--ics": papers.plan_ics, "--report": papers.plan_page}
+        for option, path in papers_asked.items():
             if path is not None:
-                _write(path, made(night))
+                _write(path, made[option](night))
     if as_json:
         _print_json(night.to_dict())
     else:
@@ -349,10 +351,13 @@ def plan(
 
 def _write(path: Path, text: str) -> None:
     """Write a file whole or not at all."""
-    aside = path.with_name(f".{path.name}.unfinished")
+    place = path.resolve()
+    if place.exists() and not place.is_file():
+        raise PinlightError(f"cannot write {path}: it is no ordinary file")
+    aside = place.with_name(f".{place.name}.unfinished")
     try:
         aside.write_text(text, encoding="utf-8", newline="")
-        aside.replace(path)
+        aside.replace(place)
     except OSError as error:
         aside.unlink(missing_ok=True)
         raise PinlightError(f"cannot write {path}: {error.strerror}") from error

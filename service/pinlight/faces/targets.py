@@ -1,6 +1,7 @@
 """Targets from what people write: names, coordinates, CSV files."""
 
 import csv
+from difflib import get_close_matches
 from pathlib import Path
 
 from pinlight.catalogue.store import Catalogue
@@ -99,6 +100,8 @@ def _targets_columns(path: Path, header: list[str]) -> list[str]:
         lacking = f"{', '.join(missing)} missing (commas part them)"
         raise InputError(f"targets file {path} has columns {found}; {lacking}")
     for name in columns:
+        if name not in _TARGET_COLUMNS and (meant := get_close_matches(name, _TARGET_COLUMNS, 1, 0.8)):
+            raise InputError(f"targets file {path} has the column {name}; is it {meant[0]}?")
         if name and columns.count(name) > 1:
             raise InputError(f"targets file {path} has the column {name} twice")
     return columns

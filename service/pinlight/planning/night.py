@@ -55,6 +55,9 @@ class Request:
         if self.required_error is not None and not 0 < self.required_error < 1:
             given = 100 * self.required_error
             raise InputError(f"required_error_percent of {name} is {given:g}; it must lie between 0 and 100")
+        if self.earliest is not None and self.latest is not None and self.latest <= self.earliest:
+            given_utc = f"{format_utc(self.latest)}; it must lie after from, {format_utc(self.earliest)}"
+            raise InputError(f"to of {name} is {given_utc}")
 
 
 @dataclass(frozen=True)

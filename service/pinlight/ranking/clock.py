@@ -28,6 +28,7 @@ Bools = NDArray[np.bool_]
 
 _MINUTE_DAY = 1 / 1440
 _GRID_MIN = 5.0
+_MOST_STEPS = 20_000
 _LONGEST_SPAN_DAY = 2.0
 
 
@@ -171,17 +172,13 @@ def span_clock(
     Raises
     ------
     InputError
-        If a time is none, or the span is empty or longer than two days.
+        If a time is none, the span is empty or longer than two days, or `step_min` is impossible.
     """
     first, last = parse_utc(start, "from"), parse_utc(end, "to")
     if not first <= last <= first + _LONGEST_SPAN_DAY:
         raise InputError(f"to is {end}; it must lie within two days after from, {start}")
-    if not 0 < step_min <= 1440:
-        raise InputError(f"step_min is {step_min:g}; it must lie between 0 and 1440")
-    count = int(np.floor((last - first) / (step_min * _MINUTE_DAY) + 1e-6)) + 1
-    if count > 20_000:
-        raise InputError(f"step_min is {step_min:g}; that is {count} times, and 20000 are the most")
-    times: Floats = first + np.arange(count, dtype=np.float64) * step_min * _MINUTE_DAY
+    steps = int(_steps(last - first, step_min) + 1e-6)
+    times: Floats = first + np.arange(steps + 1, dtype=np.float64) * step_min * _MINUTE_DAY
     if last - times[-1] > 1e-6:
         times = np.append(times, last)
     return Clock(array, stations, times)
@@ -193,7 +190,8 @@ def night_clock(array: Array, stations: tuple[Station, ...], night: str, step_mi
     Raises
     ------
     InputError
-        If the date is none, or the Sun does not go below the array's limit that night.
+        If the date is none, the Sun does not go below the array's limit that night, or `step_min` is
+        impossible.
     """
     if len(night.strip()) > 10:
         raise InputError(f"night is {night!r}; write the date of its evening, such as 2026-12-01")
@@ -205,6 +203,17 @@ def night_clock(array: Array, stations: tuple[Station, ...], night: str, step_mi
         limit = array.limits.sun_altitude_max_deg
         raise InputError(f"night is {night}; at {array.name} the Sun does not go below {limit:g} deg then")
     start, end = max(windows, key=lambda window: window[1] - window[0])
-    steps = max(round((end - start) / (step_min * _MINUTE_DAY)), 1)
+    steps = max(round(_steps(end - start, step_min)), 1)
     times: Floats = start + (end - start) / steps * np.arange(steps + 1, dtype=np.float64)
     return Clock(array, stations, times)
+
+
+def _steps(span_day: float, step_min: float) -> float:
+    if not 0 < step_min <= 1440:
+        raise InputError(f"step_min is {step_min:g}; it must lie between 0 and 1440")
+    steps = span_day / (step_min * _MINUTE_DAY)
+    if steps > _MOST_STEPS:
+        raise InputError(
+            f"step_min is {step_min:g}; that makes {steps:.0f} steps, and {_MOST_STEPS} are the most"
+        )
+    return steps
