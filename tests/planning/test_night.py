@@ -158,7 +158,8 @@ def test_the_demo_targets_are_planned(catalogue, north):
 @pytest.mark.parametrize(
     ("change", "message"),
     [
-        ({"priority": 0.0}, "priority of X is 0; it must lie above 0"),
+        ({"priority": 0.0}, "priority of X is 0; it must lie between 0.001 and 1000"),
+        ({"priority": 5e-324}, "priority of X is 4.94066e-324; it must lie between"),
         ({"priority": float("nan")}, "priority of X is nan"),
         ({"repeats": 0}, "repeats of X is 0; it must lie between 1 and 20"),
         ({"required_error": -0.01}, "required_error_percent of X is -1; it must lie between 0 and 100"),

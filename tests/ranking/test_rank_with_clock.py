@@ -5,8 +5,10 @@ import pytest
 
 from pinlight.errors import InputError
 from pinlight.faces.library import rank as rank_named
+from pinlight.faces.targets import resolve_target
 from pinlight.ranking.clock import night_clock, span_clock
 from pinlight.ranking.rank import rank
+from pinlight.ranking.reach import reach_of_target
 from pinlight.ranking.setup import setup_of
 from pinlight.ranking.target import Target
 from pinlight.sky.time import parse_utc
@@ -86,6 +88,23 @@ def test_a_star_that_is_not_up_and_one_out_of_reach_are_told_apart(north):
     found = rank(stars, TARGET, setup, limits=limits, clock=clock)
     assert found.excluded == {"not_up": 1, "out_of_reach": 1}
     assert [c.star_id for c in found.calibrators] == [1]
+
+
+def test_a_named_target_stands_where_it_has_moved_to(catalogue, north):
+    # A star of large proper motion: its track is that of its row of the edition, motion and all.
+    columns = catalogue.columns()
+    speed = np.hypot(columns.pm_ra_mas_yr, columns.pm_dec_mas_yr)
+    up = (columns.dec_deg > 20) & np.isfinite(speed) & np.isfinite(columns.parallax_mas)
+    row = int(np.flatnonzero(up)[np.argmax(speed[up])])
+    assert speed[row] > 1000
+    target = resolve_target(catalogue, columns.names[row].decode())
+    assert target.star_id == columns.ids[row]
+    clock = night_clock(north, north.station, "2026-12-01")
+    place = columns.ra_deg[row], columns.dec_deg[row]
+    moved = clock.apparent(*place, tuple(column[0] for column in columns.motion(np.array([row]))))
+    uvw = clock.uvw_m(*moved, clock.times)
+    assert np.abs(clock.uvw_m(*reach_of_target(clock, target).place, clock.times) - uvw).max() < 0.005
+    assert np.abs(clock.uvw_m(*clock.apparent(*place), clock.times) - uvw).max() > 0.02
 
 
 def test_stars_that_are_never_up_together_are_no_set(north):

@@ -38,7 +38,9 @@ def array_file_from_oifits(path: Path) -> str:
         with fits.open(path) as file:
             tables = [(hdu.name, dict(hdu.header), hdu.data) for hdu in file[1:] if hdu.name.startswith("OI_")]
             return _array_file(path, tables)
-    except (OSError, TypeError, KeyError, IndexError) as error:
+    except InputError:
+        raise
+    except (OSError, TypeError, ValueError, KeyError, IndexError) as error:
         raise InputError(f"cannot read {path} as OIFITS: {error}") from error
 
 

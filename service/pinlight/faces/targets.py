@@ -3,6 +3,7 @@
 import csv
 from difflib import get_close_matches
 from pathlib import Path
+from typing import Any
 
 from pinlight.catalogue.store import Catalogue
 from pinlight.errors import InputError
@@ -43,7 +44,17 @@ def resolve_target(catalogue: Catalogue | None, target: str | Target) -> Target:
         magnitudes={band: entry["value"] for band, entry in star["magnitudes"].items()},
         diameter_mas=star["diameter"]["limb_darkened_mas"] if star["diameter"] else None,
         star_id=star["star_id"],
+        motion=_motion(star),
     )
+
+
+def _motion(star: dict[str, Any]) -> tuple[float, float, float, float]:
+    """As `Target` has it; what the catalogue does not know is NaN."""
+    pm_ra, pm_dec, parallax, velocity = (
+        float("nan") if star[key] is None else float(star[key])
+        for key in ("pm_ra_mas_yr", "pm_dec_mas_yr", "parallax_mas", "radial_velocity_km_s")
+    )
+    return pm_ra, pm_dec, parallax, velocity
 
 
 def read_targets(path: Path) -> list[Target]:

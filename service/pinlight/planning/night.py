@@ -48,8 +48,10 @@ class Request:
 
     def __post_init__(self) -> None:
         name = self.target.name
-        if not 0 < self.priority <= 1000:
-            raise InputError(f"priority of {name} is {self.priority:g}; it must lie above 0, 1 counts most")
+        if not 0.001 <= self.priority <= 1000:
+            raise InputError(
+                f"priority of {name} is {self.priority:g}; it must lie between 0.001 and 1000, 1 is the usual"
+            )
         if not 1 <= self.repeats <= 20:
             raise InputError(f"repeats of {name} is {self.repeats}; it must lie between 1 and 20")
         if self.required_error is not None and not 0 < self.required_error < 1:
@@ -327,7 +329,7 @@ def _possible_starts(
     star_ra, star_dec = grid.apparent(
         stars.ra_deg[rows], stars.dec_deg[rows], (pm_ra, pm_dec, parallax, velocity)
     )
-    target_ra, target_dec = grid.apparent(target.ra_deg, target.dec_deg)
+    target_ra, target_dec = grid.apparent(target.ra_deg, target.dec_deg, target.motion)
     ra, dec = np.append(star_ra, target_ra)[:, None], np.append(star_dec, target_dec)[:, None]
     allowed = np.asarray(grid.observable(ra, dec, grid.times).all(axis=0))
     if request.earliest is not None:

@@ -176,7 +176,7 @@ class TargetReach:
 
 def reach_of_target(clock: Clock, target: Target) -> TargetReach:
     """When and how an array reaches a target."""
-    place = clock.apparent(target.ra_deg, target.dec_deg)
+    place = clock.apparent(target.ra_deg, target.dec_deg, target.motion)
     observable = clock.observable(*place, clock.times)
     delays = clock.delays_m(*place, clock.times)
     choices = clock.delay_lines.choices(delays[:, None], observable, _MOST_CHOICES)

@@ -17,7 +17,8 @@ class Target:
     """Where the target is and how bright; ICRS, epoch 2000.
 
     `star_id` is set when the target is a star of the catalogue, which then is no calibrator of
-    itself. `magnitudes` maps bands to magnitudes; a band that is missing leaves terms out.
+    itself. `motion` is its proper motion in RA (with cos dec) and Dec in mas/yr, parallax in mas and
+    radial velocity in km/s. `magnitudes` maps bands to magnitudes; a band that is missing leaves terms out.
 
     Raises
     ------
@@ -32,6 +33,7 @@ class Target:
     magnitudes: dict[str, float] = field(default_factory=dict)
     diameter_mas: float | None = None
     star_id: int | None = None
+    motion: tuple[float, float, float, float] | None = None
 
     def __post_init__(self) -> None:
         check_position(self.ra_deg, self.dec_deg)
