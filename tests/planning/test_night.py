@@ -59,7 +59,7 @@ def test_every_block_satisfies_every_constraint(night, catalogue, north, request
         for look, after in zip(block.looks, block.looks[1:], strict=False):
             assert look.end == pytest.approx(after.start, abs=1e-9)
             assert look.end - look.start == pytest.approx(look_day, abs=1e-9)
-        settings = tuple(s.coarse_paths_m.index(block.coarse_paths_m[s.name]) for s in north.station)
+        assert all(block.coarse_paths_m[s.name] in s.coarse_paths_m for s in north.station)
         target = next(r.target for r in requests if r.target.name == block.target)
         times = np.linspace(block.start, block.end, 25)
         for look in block.looks:
@@ -81,7 +81,6 @@ def test_every_block_satisfies_every_constraint(night, catalogue, north, request
             a = paths - w_of
             carts = np.array([s.cart_m for s in north.station])
             assert (a.max(axis=1) <= (a + carts).min(axis=1) + 0.05).all(), (block.target, look.name)
-            assert settings
     for request in requests:
         assert placed.get(request.target.name, 0) <= request.repeats
     missing = {target for target, _ in night.unscheduled}

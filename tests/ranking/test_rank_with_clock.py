@@ -63,9 +63,9 @@ def test_the_json_has_windows_and_coarse_paths(answer):
 
 def test_a_moment_is_a_span_of_no_length(catalogue, north):
     now = rank_named(catalogue, TARGET, array=north, mode="H", at="2026-12-01T21:00Z")
-    if now.calibrators:
-        [(start, end)] = now.calibrators[0].windows
-        assert start == end == pytest.approx(parse_utc("2026-12-01T21:00Z"))
+    assert now.calibrators
+    [(start, end)] = now.calibrators[0].windows
+    assert start == end == pytest.approx(parse_utc("2026-12-01T21:00Z"))
     day = rank_named(catalogue, TARGET, array=north, mode="H", at="2026-12-01T10:00Z")
     assert day.calibrators == ()
     assert any("the Sun is never below" in note for note in day.notes)

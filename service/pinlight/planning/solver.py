@@ -80,22 +80,11 @@ def choose_blocks(
     solver.parameters.num_workers = 2
     solver.parameters.random_seed = 1
     status = solver.solve(model)
-    found = (
-        [c for c, t in zip(candidates, taken, strict=True) if solver.value(t)]
-        if status
-        in (
-            cp_model.OPTIMAL,
-            cp_model.FEASIBLE,
-        )
-        else []
-    )
+    solved = status in (cp_model.OPTIMAL, cp_model.FEASIBLE)
+    found = [c for c, t in zip(candidates, taken, strict=True) if solver.value(t)] if solved else []
     if sum(c.worth for c in found) < sum(c.worth for c in greedy):
         found = greedy
     chosen = sorted(((c.request, c.slot) for c in found), key=lambda pair: pair[1])
     objective = sum(c.worth for c in found)
-    bound = (
-        solver.best_objective_bound / _UNIT
-        if status != cp_model.UNKNOWN
-        else float(sum(c.worth for c in candidates))
-    )
+    bound = solver.best_objective_bound / _UNIT if solved else float(sum(c.worth for c in candidates))
     return chosen, objective, max(bound, objective)
