@@ -1,12 +1,19 @@
 """What tests share: a catalogue filled from the seed, made once, and an environment of their own."""
 
-from collections.abc import Iterator
+import os
+import shutil
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import pytest
 
-from pinlight.catalogue.store import Catalogue, make_catalogue
+from pinlight.catalogue.making import make_catalogue
+from pinlight.catalogue.store import Catalogue, open_catalogue
 from pinlight.faces.setups import known_arrays
+from tests import postgresql
+
+# Set where a test that needs PostgreSQL may not be skipped.
+MUST_RUN = "PINLIGHT_TEST_POSTGRESQL"
 
 
 def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
@@ -31,11 +38,75 @@ def seeded_path(tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 @pytest.fixture(scope="session")
 def catalogue(seeded_path: Path) -> Iterator[Catalogue]:
-    from pinlight.catalogue.store import open_catalogue
-
     opened = open_catalogue(str(seeded_path))
     yield opened
     opened.close()
+
+
+@pytest.fixture(scope="session")
+def server() -> Iterator[postgresql.Server]:
+    """A PostgreSQL server of our own."""
+    if postgresql.binaries() is None:
+        if os.environ.get(MUST_RUN):
+            pytest.fail(f"{MUST_RUN} is set, but there is no PostgreSQL; apt-get install postgresql")
+        pytest.skip("there is no PostgreSQL; apt-get install postgresql")
+    running = postgresql.start()
+    yield running
+    running.stop()
+
+
+@pytest.fixture(scope="session")
+def seeded_database(server: postgresql.Server, seeded_path: Path) -> str:
+    """The name of a database with the seed in it, to copy from; its editions are those of `seeded_path`."""
+    server.execute("CREATE DATABASE seeded ENCODING 'UTF8' TEMPLATE template0")
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setenv("PINLIGHT_EDITIONS", f"{seeded_path}.editions")
+        make_catalogue(server.url("seeded")).close()
+    return "seeded"
+
+
+@pytest.fixture(params=["sqlite", "postgresql"])
+def empty_url(request: pytest.FixtureRequest, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> str:
+    """Where a catalogue may be made, on either database."""
+    monkeypatch.setenv("PINLIGHT_EDITIONS", str(tmp_path / "editions"))
+    if request.param == "sqlite":
+        return f"sqlite:///{tmp_path / 'test.db'}"
+    return str(request.getfixturevalue("server").new_database())
+
+
+@pytest.fixture(params=["sqlite", "postgresql"])
+def seeded_url(
+    request: pytest.FixtureRequest, tmp_path: Path, seeded_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> str:
+    """A catalogue with the seed in it, on either database, to be changed at will."""
+    if request.param == "sqlite":
+        copy_tree(f"{seeded_path}.editions", tmp_path / "editions")
+        monkeypatch.setenv("PINLIGHT_EDITIONS", str(tmp_path / "editions"))
+        (tmp_path / "test.db").write_bytes(seeded_path.read_bytes())
+        return f"sqlite:///{tmp_path / 'test.db'}"
+    server, template = (request.getfixturevalue(name) for name in ("server", "seeded_database"))
+    copy_tree(f"{seeded_path}.editions", tmp_path / "editions")
+    monkeypatch.setenv("PINLIGHT_EDITIONS", str(tmp_path / "editions"))
+    return str(server.new_database(template))
+
+
+def copy_tree(source: str, target: Path) -> None:
+    """Copy a folder, by links where that can be done."""
+    shutil.copytree(source, target, copy_function=os.link)
+
+
+@pytest.fixture
+def opened() -> Iterator[Callable[[str], Catalogue]]:
+    """Opens catalogues and closes them after the test."""
+    catalogues: list[Catalogue] = []
+
+    def open_one(url: str) -> Catalogue:
+        catalogues.append(open_catalogue(url))
+        return catalogues[-1]
+
+    yield open_one
+    for one in catalogues:
+        one.close()
 
 
 @pytest.fixture(scope="session")

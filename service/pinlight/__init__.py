@@ -7,7 +7,8 @@ from pinlight.version import __version__
 
 if TYPE_CHECKING:
     from pinlight.arrays.files import Array, load_array
-    from pinlight.catalogue.store import Catalogue, make_catalogue, open_catalogue
+    from pinlight.catalogue.making import make_catalogue
+    from pinlight.catalogue.store import Catalogue, open_catalogue
     from pinlight.errors import CatalogueError, InputError, NotFoundError, PinlightError
     from pinlight.faces.library import best_set, plan_night, rank
     from pinlight.faces.targets import read_requests
@@ -50,7 +51,7 @@ _HOMES = {
     "Target": "pinlight.ranking.target",
     "best_set": "pinlight.faces.library",
     "load_array": "pinlight.arrays.files",
-    "make_catalogue": "pinlight.catalogue.store",
+    "make_catalogue": "pinlight.catalogue.making",
     "open_catalogue": "pinlight.catalogue.store",
     "plan_night": "pinlight.faces.library",
     "rank": "pinlight.faces.library",

@@ -12,8 +12,8 @@ from typing import Any
 
 import numpy as np
 
+from pinlight.catalogue.making import make_catalogue
 from pinlight.catalogue.seed import read_seed
-from pinlight.catalogue.store import make_catalogue
 from pinlight.diameters.prediction import StarPhotometry, predict_diameters
 from pinlight.diameters.relations import load_relations
 from pinlight.faces.setups import known_arrays

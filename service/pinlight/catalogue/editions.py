@@ -5,14 +5,15 @@ import json
 import os
 import shutil
 import tempfile
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import Connection, select
+from sqlalchemy import Connection, insert, select
 
-from pinlight.catalogue.tables import Companion, Diameter, Magnitude, Star
+from pinlight.catalogue.tables import Companion, Diameter, Edition, Magnitude, Star
 from pinlight.diameters.limb_darkening import coefficients
 from pinlight.diameters.oblateness import oblateness_bound
 from pinlight.errors import CatalogueError
@@ -20,7 +21,7 @@ from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.ranking.columns import StarColumns, flag_bits
 from pinlight.sky.cells import CELL_COUNT, cell_centres
 
-__all__ = ["open_edition", "write_edition"]
+__all__ = ["open_edition", "record_edition", "write_edition"]
 
 MANIFEST = "manifest.json"
 _FORMAT = 1
@@ -103,7 +104,7 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
 
     companion = select(
         Companion.star_id, Companion.separation_arcsec, Companion.delta_v_mag, Companion.delta_ks_mag
-    ).order_by(Companion.star_id, Companion.separation_arcsec)
+    ).order_by(Companion.star_id, Companion.separation_arcsec, Companion.id)
     rows = list(connection.execute(companion))
     at = row_of[[place[row[0]] for row in rows]] if rows else np.empty(0, dtype=np.int64)
     by_row = np.argsort(at, kind="stable")
@@ -176,6 +177,20 @@ def write_edition(connection: Connection, folder: Path) -> tuple[str, dict[str, 
     except OSError as error:
         raise CatalogueError(f"cannot write edition {final}: {error.strerror or error}") from error
     return name, manifest
+
+
+def record_edition(connection: Connection, name: str, facts: dict[str, Any]) -> None:
+    """Make an edition whose files are written known to the catalogue."""
+    if connection.execute(select(Edition.name).where(Edition.name == name)).first():
+        return
+    connection.execute(
+        insert(Edition).values(
+            name=name,
+            made_utc=datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ"),
+            star_count=facts["stars"],
+            relation_set=" ".join(facts["relation_sets"]),
+        )
+    )
 
 
 def open_edition(folder: Path, name: str) -> StarColumns:

@@ -3,16 +3,16 @@
 import gzip
 import json
 import re
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
-from itertools import islice
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import Connection, Table, insert
+from sqlalchemy import Connection, insert
 
+from pinlight.catalogue.database import bulk_insert
 from pinlight.catalogue.names import name_key, short_keys
 from pinlight.catalogue.tables import Companion, Diameter, Identifier, Magnitude, Source, Star
 from pinlight.diameters.prediction import Diameters, StarPhotometry, predict_diameters
@@ -47,7 +47,6 @@ NAMES_SOURCE = {
 NEIGHBOUR_ARCSEC = 60.0
 # R to Z, RR to QZ, V335 and on: Kholopov et al., General Catalogue of Variable Stars, 4th ed.
 _VARIABLE_DESIGNATION = re.compile(r"([R-Z]|[A-Z]{2}|V\d{3,4}) [A-Z][A-Za-z]{2}")
-_CHUNK = 20_000
 
 # SIMBAD's object types of 2012 -> flag words of this project.
 OBJECT_TYPES = {
@@ -178,10 +177,10 @@ def fill_from_seed(connection: Connection, progress: Progress, path: Path | None
     errors = _by_band(default_errors, stars.magnitudes)
     connection.execute(insert(Source), [STARS_SOURCE, NAMES_SOURCE])
     progress("writing stars and names")
-    _bulk(connection, Star, _star_rows(stars))
-    _bulk(connection, Identifier, _identifier_rows(stars))
-    _bulk(connection, Magnitude, _magnitude_rows(stars, errors))
-    _bulk(connection, Companion, _companion_rows(stars))
+    bulk_insert(connection, Star, _star_rows(stars))
+    bulk_insert(connection, Identifier, _identifier_rows(stars))
+    bulk_insert(connection, Magnitude, _magnitude_rows(stars, errors))
+    bulk_insert(connection, Companion, _companion_rows(stars))
     progress("predicting diameters")
     relation_set = load_relations()
     diameters = predict_diameters(
@@ -199,7 +198,7 @@ def fill_from_seed(connection: Connection, progress: Progress, path: Path | None
         relation_set,
     )
     progress("writing diameters")
-    _bulk(connection, Diameter, _diameter_rows(diameters, relation_set))
+    bulk_insert(connection, Diameter, _diameter_rows(diameters, relation_set))
     return len(stars.names)
 
 
@@ -207,21 +206,6 @@ def _by_band(
     function: Callable[[str, NDArray[np.float64]], NDArray[np.float64]], magnitudes: NDArray[np.float64]
 ) -> NDArray[np.float64]:
     return np.stack([function(band, magnitudes[:, i]) for i, band in enumerate(CATALOGUE_BANDS)], axis=1)
-
-
-def _bulk(connection: Connection, table: type[Any], rows: Iterable[dict[str, Any]]) -> None:
-    """Insert rows in chunks, as plain tuples where the driver takes positions."""
-    target: Table = table.__table__
-    iterator = iter(rows)
-    statement = None
-    while chunk := list(islice(iterator, _CHUNK)):
-        if statement is None:
-            statement = insert(target).compile(dialect=connection.dialect, column_keys=list(chunk[0]))
-        if statement.positional and statement.positiontup is not None:
-            names = statement.positiontup
-            connection.exec_driver_sql(str(statement), [tuple(row[name] for name in names) for row in chunk])
-        else:
-            connection.exec_driver_sql(str(statement), chunk)
 
 
 def _or_none(values: NDArray[np.float64]) -> list[float | None]:

@@ -1,22 +1,28 @@
-"""The catalogue: making it, opening it, looking stars up."""
+"""The open catalogue: its editions, its stars and what is known of them."""
 
 import json
-import os
 import re
-import tempfile
-from collections.abc import Callable, Sequence
-from contextlib import contextmanager
+from collections.abc import Sequence
+from contextlib import AbstractContextManager
 from datetime import UTC, datetime
 from functools import cached_property
 from pathlib import Path
 from typing import Any
-from urllib.parse import quote
 
-from sqlalchemy import Engine, create_engine, event, func, insert, inspect, select, text
-from sqlalchemy.engine import URL
-from sqlalchemy.exc import DBAPIError, SQLAlchemyError
+from sqlalchemy import Connection, Engine, func, insert, select
 
-from pinlight.catalogue.editions import open_edition
+from pinlight.catalogue.database import (
+    Place,
+    database_errors,
+    engine_of,
+    place_of,
+    reading,
+    refuse_newer,
+    schema_of,
+    snapshot,
+    writing,
+)
+from pinlight.catalogue.editions import open_edition, record_edition
 from pinlight.catalogue.names import name_key
 from pinlight.catalogue.tables import (
     SCHEMA,
@@ -32,174 +38,11 @@ from pinlight.catalogue.tables import (
 from pinlight.errors import CatalogueError, InputError, NotFoundError
 from pinlight.ranking.columns import StarColumns
 
-__all__ = ["STANDINGS", "Catalogue", "default_url", "make_catalogue", "open_catalogue"]
+__all__ = ["STANDINGS", "Catalogue", "open_catalogue"]
 
 STANDINGS = ("vouched", "unproven", "doubted", "barred")
 _MOST_CHOICES = 8
 _LONGEST_NAME = 200
-_LOCK_S = 600
-
-
-def default_url() -> str:
-    """`PINLIGHT_DB`, or a file in the user's data folder."""
-    from platformdirs import user_data_path
-
-    return os.environ.get("PINLIGHT_DB") or f"sqlite:///{user_data_path('pinlight') / 'pinlight.db'}"
-
-
-def _path_of(url: str | None) -> Path:
-    """The file behind a URL such as ``sqlite:///FILE``; anything that is no URL is a file name."""
-    given = url or default_url()
-    match = re.match(r"(\w+)(?:\+\w+)?:(?://)?", given)
-    if match and (match[1] == "sqlite" or "://" in match[0]):
-        # Only the kind of database is repeated: a URL may hold a password.
-        if match[1] != "sqlite":
-            raise InputError(f"db is a {match[1]} URL; this version keeps catalogues in files: sqlite:///FILE")
-        name = given.removeprefix("sqlite:///") if given.startswith("sqlite:///") else ""
-        if not name or name == ":memory:" or "?" in name:
-            raise InputError(f"db is {given!r}; write sqlite:///FILE or a file name")
-        given = name
-    try:
-        return Path(given).expanduser().resolve()
-    except (OSError, RuntimeError, ValueError) as error:
-        raise InputError(f"db is {given[:60]!r}, which is no usable file name: {error}") from error
-
-
-@contextmanager
-def _database_errors(path: Path, doing: str) -> Any:
-    """Driver errors become one line that says which file and what to do."""
-    try:
-        yield
-    except (DBAPIError, OSError) as error:
-        reason = str(getattr(error, "orig", None) or getattr(error, "strerror", None) or error)
-        raise CatalogueError(f"cannot {doing} catalogue {path}: {reason}; nothing was changed") from error
-    except SQLAlchemyError as error:
-        raise CatalogueError(f"cannot {doing} catalogue {path}: {error}") from error
-
-
-def _engine(path: Path) -> Engine:
-    """An engine on a file; on read-only ground one that asks SQLite for no lock or log file."""
-    url = URL.create("sqlite", database=str(path))
-    effective = os.access in os.supports_effective_ids
-    if path.exists() and not os.access(path.parent, os.W_OK, effective_ids=effective):
-        # Without a log beside it nobody is writing; with one, what it holds must be read too.
-        how = "mode=ro" if path.with_name(f"{path.name}-wal").exists() else "immutable=1"
-        as_uri = f"file:{quote(str(path))}?{how}"
-        url = URL.create("sqlite", database=as_uri, query={"uri": "true"})
-    engine = create_engine(url, connect_args={"timeout": 30})
-
-    @event.listens_for(engine, "connect")
-    def _settings(connection: Any, _record: Any) -> None:
-        connection.execute("PRAGMA foreign_keys = ON")
-
-    return engine
-
-
-def _schema_of(engine: Engine) -> str | None:
-    """The revision of a database, None for one that holds no catalogue."""
-    with engine.connect() as connection:
-        if not inspect(connection).has_table("alembic_version"):
-            return None
-        revision = connection.execute(text("SELECT version_num FROM alembic_version")).scalar()
-        return str(revision) if revision else None
-
-
-def _refuse_newer(schema: str, path: Path) -> None:
-    if schema > SCHEMA:
-        raise CatalogueError(
-            f"catalogue {path} was made by a newer Pinlight (schema {schema}, this one knows {SCHEMA}); "
-            "install that version"
-        )
-
-
-def make_catalogue(
-    url: str | None = None, *, seed: bool = True, progress: Callable[[str], object] = str
-) -> "Catalogue":
-    """Make the catalogue, or bring an existing one to the newest schema, and open it.
-
-    A new catalogue is built aside and renamed when complete: another process sees all of it or
-    none, and two that make the same one end with one. `seed` fills a new one with the stars
-    that Pinlight ships and freezes the first edition.
-
-    Raises
-    ------
-    InputError
-        If the URL is none that this version can keep a catalogue at.
-    CatalogueError
-        If the place cannot be written, or holds something else or newer.
-    """
-    from filelock import FileLock, Timeout
-
-    path = _path_of(url)
-    with _database_errors(path, "make"):
-        if path.exists() and not path.is_file():
-            raise CatalogueError(f"{path} is no ordinary file; choose another for the catalogue")
-        path.parent.mkdir(parents=True, exist_ok=True)
-        if not path.exists():
-            with tempfile.TemporaryFile(dir=path.parent):  # fails at once where nothing can be written
-                pass
-        try:
-            with FileLock(f"{path}.lock", timeout=_LOCK_S):
-                if path.exists() and path.stat().st_size > 0:
-                    _migrate(path)
-                else:
-                    _build(path, seed, progress)
-        except Timeout as error:
-            raise CatalogueError(
-                f"another process has been making {path} for {_LOCK_S} s; try later"
-            ) from error
-    return open_catalogue(url)
-
-
-def _migrate(path: Path) -> None:
-    from pinlight.catalogue.schema import upgrade
-
-    engine = _engine(path)
-    try:
-        schema = _schema_of(engine)
-        if schema is None:
-            raise CatalogueError(f"{path} is a database, but no Pinlight catalogue; choose another file")
-        _refuse_newer(schema, path)
-        if schema < SCHEMA:
-            with engine.begin() as connection:
-                upgrade(connection)
-        catalogue = Catalogue(path, engine)
-        try:
-            if catalogue.editions():
-                catalogue.columns()
-        except CatalogueError:  # its files were lost or left behind; the same content makes them again
-            catalogue.freeze()
-    finally:
-        engine.dispose()
-
-
-def _build(path: Path, seed: bool, progress: Callable[[str], object]) -> None:
-    from pinlight.catalogue.schema import upgrade
-    from pinlight.catalogue.seed import fill_from_seed
-
-    for left_over in path.parent.glob(f"{path.name}.unfinished*"):
-        left_over.unlink()
-    aside = path.with_name(f"{path.name}.unfinished")
-    engine = _engine(aside)
-    try:
-        with engine.connect() as connection:
-            connection.exec_driver_sql("PRAGMA journal_mode = WAL")
-        with engine.begin() as connection:
-            upgrade(connection)
-            if seed:
-                fill_from_seed(connection, progress)
-        catalogue = Catalogue(path, engine)
-        if seed:
-            progress("freezing the first edition")
-            catalogue.freeze()
-        with engine.connect() as connection:
-            connection.exec_driver_sql("PRAGMA wal_checkpoint(TRUNCATE)")
-        engine.dispose()
-        os.replace(aside, path)
-    finally:
-        engine.dispose()
-        for left_over in path.parent.glob(f"{path.name}.unfinished*"):
-            left_over.unlink()
 
 
 def open_catalogue(url: str | None = None) -> "Catalogue":
@@ -212,27 +55,32 @@ def open_catalogue(url: str | None = None) -> "Catalogue":
     CatalogueError
         If there is no catalogue, or one of another schema.
     """
-    path = _path_of(url)
-    with _database_errors(path, "open"):
-        found = path.is_file()
-    if not found:
-        raise CatalogueError(f"there is no catalogue at {path}; run 'pinlight init' to make one")
-    engine = _engine(path)
-    with _database_errors(path, "open"):
-        schema = _schema_of(engine)
-    if schema is None:
-        raise CatalogueError(f"{path} is no Pinlight catalogue; run 'pinlight init --db FILE' to make one")
-    _refuse_newer(schema, path)
-    if schema < SCHEMA:
-        raise CatalogueError(f"catalogue {path} has schema {schema}; run 'pinlight init' to renew it")
-    return Catalogue(path, engine)
+    place = place_of(url)
+    if place.path is not None:
+        with database_errors(place, "open"):
+            found = place.path.is_file()
+        if not found:
+            raise CatalogueError(f"there is no catalogue at {place}; run 'pinlight init' to make one")
+    engine = engine_of(place)
+    try:
+        with database_errors(place, "open"), engine.connect() as connection:
+            schema = schema_of(connection)
+        if schema is None:
+            raise CatalogueError(f"{place} is no Pinlight catalogue; run 'pinlight init --db URL' to make one")
+        refuse_newer(schema, place)
+        if schema < SCHEMA:
+            raise CatalogueError(f"catalogue {place} has schema {schema}; run 'pinlight init' to renew it")
+    except BaseException:
+        engine.dispose()
+        raise
+    return Catalogue(place, engine)
 
 
 class Catalogue:
     """An open catalogue: rankings read its columns, people ask it for stars."""
 
-    def __init__(self, path: Path, engine: Engine) -> None:
-        self.path = path
+    def __init__(self, place: Place, engine: Engine) -> None:
+        self.place = place
         self._engine = engine
         self._open_editions: dict[str, StarColumns] = {}
 
@@ -243,30 +91,26 @@ class Catalogue:
     @cached_property
     def editions_folder(self) -> Path:
         """Where the edition files are."""
-        chosen = os.environ.get("PINLIGHT_EDITIONS")
-        return Path(chosen) if chosen else self.path.with_name(f"{self.path.name}.editions")
+        return self.place.editions_folder
+
+    def reading(self) -> AbstractContextManager[Connection]:
+        """A connection to read by."""
+        return reading(self._engine, self.place)
 
     def freeze(self) -> str:
         """Write the present content as an edition and return its name."""
         from pinlight.catalogue.editions import write_edition
 
-        with _database_errors(self.path, "write to"), self._engine.begin() as connection:
+        with snapshot(self._engine, self.place) as connection:
             name, facts = write_edition(connection, self.editions_folder)
-            if not connection.execute(select(Edition.name).where(Edition.name == name)).first():
-                connection.execute(
-                    insert(Edition).values(
-                        name=name,
-                        made_utc=datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ"),
-                        star_count=facts["stars"],
-                        relation_set=" ".join(facts["relation_sets"]),
-                    )
-                )
+        with writing(self._engine, self.place) as connection:
+            record_edition(connection, name, facts)
         return name
 
     def editions(self) -> list[dict[str, Any]]:
         """All editions, newest first."""
         query = select(Edition.name, Edition.made_utc, Edition.star_count, Edition.relation_set)
-        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+        with self.reading() as connection:
             rows = connection.execute(query.order_by(Edition.made_utc.desc(), Edition.name)).mappings().all()
         return [dict(row) for row in rows]
 
@@ -280,7 +124,7 @@ class Catalogue:
         """
         known = [row["name"] for row in self.editions()]
         if not known:
-            raise CatalogueError(f"catalogue {self.path} has no edition yet; add stars and freeze one")
+            raise CatalogueError(f"catalogue {self.place} has no edition yet; add stars and freeze one")
         name = edition or known[0]
         if name not in known:
             raise NotFoundError(f"edition is {name!r}; the catalogue has {', '.join(known[:_MOST_CHOICES])}")
@@ -330,17 +174,16 @@ class Catalogue:
             select(Star.id, Star.name, Identifier.name.label("identifier"), Identifier.short)
             .join(Identifier, Identifier.star_id == Star.id)
             .where(Identifier.key == key)
-            .order_by(Star.name)
         )
-        with _database_errors(self.path, "read"), self._engine.connect() as connection:
-            return connection.execute(query).all()
+        with self.reading() as connection:
+            return sorted(connection.execute(query), key=lambda row: (row.name, row.id))
 
     def _plain_name(self, star_id: int, name: str) -> str:
         """A star's name, with a catalogue number beside it where case alone tells it from another's."""
         if len({row.id for row in self._bearers(name_key(name)) if not row.short}) < 2:
             return name
         query = select(Identifier.name).where(Identifier.star_id == star_id, ~Identifier.short)
-        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+        with self.reading() as connection:
             others = sorted(other for (other,) in connection.execute(query) if re.match(r"H(D|IP|R) ", other))
         return f"{name} ({others[0]})" if others else name
 
@@ -348,7 +191,7 @@ class Catalogue:
     def _all_names(self) -> dict[str, str]:
         """Every key and a name it stands for."""
         query = select(Identifier.key, Identifier.name).where(~Identifier.short)
-        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+        with self.reading() as connection:
             return {row.key: row.name for row in connection.execute(query)}
 
     def _near_misses(self, key: str, most: int = 3) -> list[str]:
@@ -361,7 +204,7 @@ class Catalogue:
         """The newest standing of every star that has one, by star id."""
         newest = select(func.max(Standing.id)).group_by(Standing.star_id)
         query = select(Standing.star_id, Standing.standing).where(Standing.id.in_(newest))
-        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+        with self.reading() as connection:
             return {row.star_id: row.standing for row in connection.execute(query)}
 
     def set_standing(self, star_id: int, standing: str, reason: str, made_by: str) -> None:
@@ -379,7 +222,7 @@ class Catalogue:
         if not reason.strip():
             raise InputError("reason is empty; say why")
         now = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ")
-        with _database_errors(self.path, "write to"), self._engine.begin() as connection:
+        with writing(self._engine, self.place) as connection:
             if connection.execute(select(Star.id).where(Star.id == star_id)).first() is None:
                 raise NotFoundError(f"star_id is {star_id}; there is no such star")
             connection.execute(
@@ -396,7 +239,7 @@ class Catalogue:
         NotFoundError
             If there is no such star.
         """
-        with _database_errors(self.path, "read"), self._engine.connect() as connection:
+        with self.reading() as connection:
 
             def rows(*columns: Any, table: Any, order: Any = None) -> list[dict[str, Any]]:
                 query = select(*columns).where(table.star_id == star_id).order_by(order)

@@ -49,7 +49,10 @@ class _Group(click.Group):
 
 def _db(function: Callable[..., Any]) -> Callable[..., Any]:
     return click.option(
-        "--db", envvar="PINLIGHT_DB", metavar="URL", help="The catalogue: sqlite:///FILE or a file name."
+        "--db",
+        envvar="PINLIGHT_DB",
+        metavar="URL",
+        help="The catalogue: sqlite:///FILE, a file name, or postgresql+psycopg://…",
     )(function)
 
 
@@ -93,12 +96,12 @@ def main() -> None:
 @click.option("--empty", is_flag=True, help="Leave a new catalogue without the stars that Pinlight ships.")
 def init(db: str | None, empty: bool) -> None:
     """Make the catalogue, or bring it to the newest schema."""
-    from pinlight.catalogue.store import make_catalogue
+    from pinlight.catalogue.making import make_catalogue
 
     catalogue = make_catalogue(db, seed=not empty, progress=_say)
     editions = catalogue.editions()
     stars = f"{editions[0]['star_count']} stars, edition {editions[0]['name']}" if editions else "no stars yet"
-    click.echo(f"catalogue {catalogue.path}: {stars}")
+    click.echo(f"catalogue {catalogue.place}: {stars}")
 
 
 @main.command()
@@ -401,7 +404,7 @@ def _serve(catalogue: "Catalogue", host: str, port: int, arrays: Path | None, op
 @_as_json
 def demo(db: str | None, once: bool, port: int, as_json: bool) -> None:
     """See it work: real stars ranked for invented targets on two invented arrays, then the page."""
-    from pinlight.catalogue.store import make_catalogue
+    from pinlight.catalogue.making import make_catalogue
     from pinlight.faces.library import rank as rank_target
     from pinlight.faces.setups import known_arrays
     from pinlight.faces.targets import read_targets
