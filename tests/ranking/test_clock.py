@@ -12,11 +12,13 @@ from astropy.utils import iers
 from pinlight.arrays.files import Station
 from pinlight.arrays.reach import DelayLines
 from pinlight.errors import InputError
-from pinlight.ranking.clock import Clock, night_clock, span_clock
+from pinlight.ranking.clock import Clock, moment_clock, night_clock, span_clock
 from pinlight.ranking.reach import reach_of_target
 from pinlight.ranking.target import Target
+from pinlight.ranking.track import track
 from pinlight.sky.places import apparent_place_deg
 from pinlight.sky.time import format_utc, parse_utc
+from pinlight.sky.windows import runs
 
 RANDOM = np.random.default_rng(21)
 
@@ -89,7 +91,7 @@ def test_uvw_agree_with_astropys_altaz_to_five_millimetres(north, trial):
 
 
 def test_sun_and_moon_agree_with_astropy(north):
-    clock = span_clock(north, north.station, "2026-12-01T16:00Z", "2026-12-02T06:00Z", 7.0)
+    clock = span_clock(north, north.station, "2026-12-01T16:00Z", "2026-12-02T06:00Z")
     frame = astropy_frame(north, clock.times)
     sun = get_sun(frame.obstime).transform_to(frame).alt.deg
     close = np.abs(sun - north.limits.sun_altitude_max_deg) < 0.01
@@ -119,15 +121,19 @@ def random_lines(random, count=4):
     return DelayLines(
         tuple(
             station(
-                str(i), 0, 0, fixed=random.uniform(0, 60), coarse=sorted(random.uniform(0, 120, random.integers(1, 5))),
-                cart=random.uniform(10, 60),
+                str(i), 0, 0, fixed=random.uniform(0, 60), coarse=random.uniform(0, 120, random.integers(1, 5)),
+                cart=random.uniform(1, 60),
             )
             for i in range(count)
         )
     )  # fmt: skip
 
 
-@pytest.mark.parametrize("trial", range(40))
+def sizes(lines):
+    return [len(s.coarse_paths_m) for s in lines.stations]
+
+
+@pytest.mark.parametrize("trial", range(60))
 def test_reach_agrees_with_brute_force_over_all_coarse_choices(trial):
     random = np.random.default_rng(100 + trial)
     lines = random_lines(random)
@@ -155,23 +161,35 @@ def test_reach_agrees_with_brute_force_over_all_coarse_choices(trial):
             best = max(best, run)
         return best
 
-    everything = [by_definition(k) for k in product(*(range(len(s.coarse_paths_m)) for s in lines.stations))]
+    everything = [by_definition(k) for k in product(*map(range, sizes(lines)))]
     best = max(longest(holds) for holds in everything)
-    choices = lines.choices(delays, allowed, most=5)
-    if best == 0:
-        assert choices == []
-    else:
-        assert longest(choices[0].in_reach) == best
-        lengths = [longest(choice.in_reach) for choice in choices]
-        assert lengths == sorted(lengths, reverse=True)
-        distinct = sorted(
-            {holds.tobytes(): longest(holds) for holds in everything if holds.any()}.values(), reverse=True
-        )
-        assert lengths == distinct[: len(lengths)]
-    for choice in choices:
-        np.testing.assert_array_equal(choice.in_reach, by_definition(choice.settings))
-        each = [lines.with_settings(choice.settings, delays[:, star]) for star in range(stars)]
-        np.testing.assert_array_equal(np.all(each, axis=0) & allowed, choice.in_reach)
+    # Two blocks at once: all stars together, and the first alone.
+    low = np.stack([delays.min(axis=1), delays[:, 0]], axis=1)
+    high = np.stack([delays.max(axis=1), delays[:, 0]], axis=1)
+    found = lines.longest(low, high, np.stack([allowed, allowed]))
+    assert found.length[0] == best
+    assert found.length[1] >= best
+    settings = tuple(found.settings[0].tolist())
+    holds = by_definition(settings)
+    assert longest(holds) == best
+    first = int(found.first[0])
+    assert holds[first : first + best].all()
+    each = [lines.with_settings(settings, delays[:, star]) for star in range(stars)]
+    np.testing.assert_array_equal(np.all(each, axis=0) & allowed, holds)
+    # At every single time: settings are found exactly where any serve, and they do serve.
+    settings_then, served = lines.settings_for(low[:, 0], high[:, 0])
+    ever = np.any([by_definition(k) | ~allowed for k in product(*map(range, sizes(lines)))], axis=0)
+    np.testing.assert_array_equal(served[allowed], ever[allowed])
+    holding = lines.with_settings(settings_then, low[:, 0]) & lines.with_settings(settings_then, high[:, 0])
+    assert holding[served].all()
+    if not served.any():
+        failure = lines.shortfall(low[:, 0], high[:, 0])
+        longer = [s.model_copy(update={"cart_m": s.cart_m + failure.short_by_m + 0.02}) for s in lines.stations]
+        shorter = [
+            s.model_copy(update={"cart_m": s.cart_m + failure.short_by_m - 0.02}) for s in lines.stations
+        ]
+        assert DelayLines(tuple(longer)).settings_for(low[:, 0], high[:, 0])[1].any()
+        assert not DelayLines(tuple(shorter)).settings_for(low[:, 0], high[:, 0])[1].any()
 
 
 def test_the_pair_that_fails_is_named_with_its_metres():
@@ -183,10 +201,44 @@ def test_the_pair_that_fails_is_named_with_its_metres():
         )
     )
     # a_A = 0, a_B = 100 or 110: B lies 100 m ahead of A, whose cart makes up 20.
-    failure = lines.worst_pair(np.zeros((3, 1, 4)))
+    failure = lines.shortfall(np.zeros((3, 4)), np.zeros((3, 4)))
     assert failure.stations == ("A", "B")
-    assert failure.short_by_m == pytest.approx(80.0)
-    assert lines.choices(np.zeros((3, 1, 4)), np.ones(4, dtype=bool)) == []
+    assert failure.short_by_m == pytest.approx(80.0, abs=0.02)
+    assert not lines.settings_for(np.zeros((3, 4)), np.zeros((3, 4)))[1].any()
+
+
+def test_three_stations_that_meet_two_by_two_only_are_out_of_reach():
+    # B reaches A and C, each with another setting; A and C reach each other: only the three fail.
+    lines = DelayLines(
+        (
+            station("A", 0, 0, cart=0.0),
+            station("B", 0, 0, coarse=(0.0, 10.0), cart=0.0),
+            station("C", 0, 0, fixed=10.0, cart=10.0),
+        )
+    )
+    pairs = [DelayLines((lines.stations[i], lines.stations[j])) for i, j in ((0, 1), (1, 2))]
+    assert all(pair.settings_for(np.zeros((1, 1)), np.zeros((1, 1)))[1].all() for pair in pairs)
+    delays = np.zeros((3, 1))
+    assert not lines.settings_for(delays, delays)[1].any()
+    assert lines.shortfall(delays, delays).short_by_m == pytest.approx(10.0, abs=0.02)
+
+
+def test_a_generous_array_is_searched_at_once():
+    # 45 settings on each of six stations: 8e9 choices, most of them good.
+    random = np.random.default_rng(3)
+    stations = [
+        station(str(i), 0, 0, fixed=random.uniform(0, 60), coarse=9.14 * np.arange(45), cart=150.0)
+        for i in range(6)
+    ]
+    lines = DelayLines(tuple(stations))
+    turn = np.linspace(-1.5, 1.5, 170)
+    w = 200 * np.sin(turn + random.uniform(-3, 3, (6, 1))) * random.uniform(0, 1, (6, 1))
+    first, second = np.array(lines.pairs).T
+    delays = (w[first] - w[second])[:, None]
+    found = lines.longest(delays, delays, np.ones((1, 170), dtype=bool))
+    begin, end = int(found.first[0]), int(found.first[0] + found.length[0])
+    assert found.length[0] > 20
+    assert lines.with_settings(tuple(found.settings[0].tolist()), delays[:, 0, begin:end]).all()
 
 
 def test_a_zero_cart_reaches_only_equal_paths():
@@ -201,21 +253,21 @@ def test_a_common_long_array_reaches_most_of_the_sky(north):
     arms = [(230 * np.sin(a), 230 * np.cos(a)) for a in np.radians([10, 130, 250])]
     stations = [station(f"{i}", *arm, coarse=coarse, cart=61.0) for i, arm in enumerate(arms)]
     array = at_site(north, 34.0, 0.0, stations)
-    clock = night_clock(array, array.station, "2026-12-01", 10.0)
-    reached = [bool(reach_of_target(clock, Target(float(ra), 25.0)).choices) for ra in range(0, 180, 20)]
+    clock = night_clock(array, array.station, "2026-12-01")
+    reached = [reach_of_target(clock, Target(float(ra), 25.0)).settings is not None for ra in range(0, 180, 20)]
     assert all(reached)
 
 
 @pytest.mark.parametrize("trial", range(6))
 def test_windows_agree_with_a_dense_scan(north, trial):
     random = np.random.default_rng(300 + trial)
-    clock = night_clock(north, north.station[:4], "2026-09-15", 5.0)
+    clock = night_clock(north, north.station[:4], "2026-09-15")
     reach = reach_of_target(clock, Target(float(random.uniform(270, 400) % 360), float(random.uniform(0, 70))))
-    windows = reach.target_windows()
+    windows = reach.target_windows
     dense = np.arange(clock.times[0], clock.times[-1], 4 / 86_400)
     holds = clock.observable(*reach.place, dense)
-    if reach.choices:
-        holds &= clock.delay_lines.with_settings(reach.choices[0].settings, clock.delays_m(*reach.place, dense))
+    if reach.settings is not None:
+        holds &= clock.delay_lines.with_settings(reach.settings, clock.delays_m(*reach.place, dense))
     else:
         assert windows == []
         return
@@ -230,7 +282,7 @@ def test_a_horizon_blocks_only_where_it_stands(north):
     wall = [(0, 0), (89, 0), (90, 60), (180, 60), (181, 0)]
     stations = [station("A", 0, 0, horizon=wall), station("B", 50, 0)]
     array = at_site(north, 38.0, 0.0, stations)
-    clock = span_clock(array, array.station, "2026-12-01T00:00Z", "2026-12-02T00:00Z", 4.0)
+    clock = span_clock(array, array.station, "2026-12-01T00:00Z", "2026-12-02T00:00Z")
     ra, dec = clock.apparent(100.0, 10.0)
     above = clock.above(ra, dec, clock.times)
     hours = clock.hour_angle_deg(ra, clock.times)
@@ -268,27 +320,28 @@ def test_a_polar_night_is_long(north):
 
 
 @pytest.mark.parametrize(
-    ("start", "end", "step", "message"),
+    ("start", "end", "message"),
     [
         (
             "2026-12-01T10:00",
             "2026-12-01T09:00",
-            5,
             "to is 2026-12-01T09:00; it must lie within two days after from",
         ),
-        ("2026-12-01", "2026-12-09", 5, "within two days after from"),
-        ("2026-12-01", "2026-12-02", 0, "step_min is 0; it must lie between 0 and 1440"),
-        ("2026-12-01", "2026-12-02", float("nan"), "step_min is nan"),
-        ("2026-12-01", "2026-12-02", 0.01, "20000 are the most"),
+        ("2026-12-01", "2026-12-09", "within two days after from"),
     ],
 )
-def test_a_span_that_is_none_is_named(north, start, end, step, message):
+def test_a_span_that_is_none_is_named(north, start, end, message):
     with pytest.raises(InputError, match=message):
-        span_clock(north, north.station, start, end, step)
+        span_clock(north, north.station, start, end)
+
+
+def test_a_moment_that_is_none_is_named_as_it_was_given(north):
+    with pytest.raises(InputError, match="at is 'now'; write UTC"):
+        moment_clock(north, north.station, "now")
 
 
 def test_why_a_target_cannot_be_observed_is_told(north):
-    clock = night_clock(north, north.station, "2026-12-01", 10.0)
+    clock = night_clock(north, north.station, "2026-12-01")
     assert "it never rises above 30 deg" in reach_of_target(clock, Target(60.0, -60.0)).why_not
     day = span_clock(north, north.station, "2026-12-01T10:00Z", "2026-12-01T12:00Z")
     assert "the Sun is never below -12 deg" in reach_of_target(day, Target(60.0, 30.0)).why_not
@@ -310,7 +363,54 @@ def test_a_date_without_rotation_data_is_noted(north):
         assert "No Earth-rotation data" in night_clock(north, north.station, night).notes[0]
 
 
-@pytest.mark.parametrize("step_min", [0.0, -1.0, float("nan"), float("inf"), 1e-9])
-def test_a_nights_impossible_step_is_named(north, step_min):
+@pytest.mark.parametrize("step_min", [0.0, -1.0, float("nan"), float("inf"), 1441.0, 1e-9])
+def test_an_impossible_step_is_named(north, step_min):
     with pytest.raises(InputError, match="step_min is "):
-        night_clock(north, north.station, "2026-12-01", step_min)
+        night_clock(north, north.station, "2026-12-01").every(step_min)
+
+
+def test_steps_begin_with_the_span_and_end_with_it(north):
+    clock = span_clock(north, north.station, "2026-12-01T20:00Z", "2026-12-01T20:50Z")
+    assert [format_utc(time)[11:16] for time in clock.every(20.0)] == ["20:00", "20:20", "20:40", "20:50"]
+    assert len(clock.every(25.0)) == 3
+
+
+def test_a_tracks_windows_do_not_depend_on_its_step(north):
+    clock = night_clock(north, north.station, "2026-12-01")
+    tracks = [track(clock, Target(60.0, 28.0), step) for step in (1.0, 60.0, 900.0)]
+    assert tracks[0]["windows"]
+    assert all(one["windows"] == tracks[0]["windows"] for one in tracks)
+    for one in tracks:
+        for at in one["times"]:
+            inside = any(w["start_utc"] <= at["utc"] <= w["end_utc"] for w in one["windows"])
+            near = any(
+                abs(parse_utc(at["utc"]) - parse_utc(edge)) < 15 / 86_400
+                for w in one["windows"]
+                for edge in w.values()
+            )
+            assert near or inside == at["in_reach"] == (at["blocked_by"] == [])
+
+
+def test_a_mast_too_thin_for_the_grid_still_splits_a_window(north):
+    # 0.4 deg wide: the star passes it in less than the five minutes between a ranking's times.
+    mast = [(0, 0), (275.95, 0), (276.0, 70), (276.4, 70), (276.45, 0), (360, 0)]
+    stations = [s.model_copy(update={"horizon": tuple(mast), "cart_m": 300.0}) for s in north.station[:2]]
+    array = at_site(north, 38.0, 15.0, stations)
+    clock = night_clock(array, array.station, "2026-12-01")
+    reach = reach_of_target(clock, Target(60.0, 30.0))
+    dense = np.arange(clock.times[0], clock.times[-1], 2 / 86_400)
+    up = clock.observable(*reach.place, dense)
+    assert len(runs(up)) == len(reach.target_windows) == 2
+    gap = (reach.target_windows[1][0] - reach.target_windows[0][1]) * 1440
+    assert 1 < gap < 5
+
+
+def test_daylight_is_not_blamed_on_the_delay_lines(north):
+    clock = span_clock(north, north.station, "2026-12-01T10:00Z", "2026-12-01T12:00Z")
+    told = track(clock, Target(220.0, 30.0), 10.0)
+    assert told["windows"] == []
+    assert told["coarse_paths_m"] is None
+    assert all("sun" in at["blocked_by"] for at in told["times"])
+    ever = clock.delay_lines.settings_for(*(2 * [reach_of_target(clock, Target(220.0, 30.0)).delays_m]))[1]
+    blamed = ["delay lines at every coarse setting" in at["blocked_by"] for at in told["times"]]
+    assert blamed == [not one for one in ever[::2]]

@@ -67,6 +67,7 @@ class Limits(_Part):
     moon_distance_min_deg: Annotated[Number, Field(ge=0, le=180)]
     separation_max_deg: Annotated[Number, Field(gt=0, le=180)]
     v2_min: Annotated[Number, Field(ge=0, lt=1)]
+    coarse_change_min: Annotated[Number, Field(ge=0, le=120)] = 0.0
 
 
 class Station(_Part):

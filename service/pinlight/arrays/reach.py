@@ -1,33 +1,36 @@
 """Reach: where the stations' delay lines can equalise the paths to all stars of a block."""
 
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, reduce
 from itertools import combinations
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pinlight.arrays.files import Station
-from pinlight.sky.windows import runs
 
-__all__ = ["Choice", "DelayLines", "PairFailure"]
+__all__ = ["TOLERANCE_M", "DelayLines", "Longest", "PairFailure", "coarse_paths_m"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
+Ints = NDArray[np.int64]
+
+TOLERANCE_M = 1e-9  # far below a wavelength, far above rounding
+_SHORTFALL_STEP_M = 0.01
 
 
 @dataclass(frozen=True)
-class Choice:
-    """One coarse delay setting a station, and the times at which all stars are in reach with it.
+class Longest:
+    """The longest time that blocks stay in reach under one coarse setting a station.
 
-    settings : index into each station's `coarse_paths_m`
-    in_reach : shape (T,)
-    longest : first and last index of the longest stretch, or None
+    settings : shape (B, stations), index into each station's `coarse_paths_m`
+    first : shape (B,), the time step where that begins; of several equally long, the earliest
+    length : shape (B,), steps in reach; 0 if the block never is, under any settings
     """
 
-    settings: tuple[int, ...]
-    in_reach: Bools
-    longest: tuple[int, int] | None
+    settings: Ints
+    first: Ints
+    length: Ints
 
 
 @dataclass(frozen=True)
@@ -43,7 +46,7 @@ class DelayLines:
 
     A star is in reach when max(a_i) <= min(a_i + S_i), a_i = F_i + k_i - w_i: fixed path, coarse
     setting, geometric delay; S_i is the cart's range; everything in optical path. That is one
-    condition a pair: c_ij - S_j <= w_i - w_j <= c_ij + S_i, c_ij = F_i + k_i - F_j - k_j.
+    condition a pair, with paths p_i = F_i + k_i: p_i - p_j - S_j <= w_i - w_j <= p_i - p_j + S_i.
     """
 
     def __init__(self, stations: tuple[Station, ...]) -> None:
@@ -51,120 +54,173 @@ class DelayLines:
         self.pairs = list(combinations(range(len(stations)), 2))
 
     @cached_property
-    def _offsets_m(self) -> list[Floats]:
-        """c_ij of each pair, shape (settings of i, settings of j)."""
-        paths = [s.fixed_path_m + np.asarray(s.coarse_paths_m) for s in self.stations]
-        return [paths[i][:, None] - paths[j][None, :] for i, j in self.pairs]
+    def _order(self) -> list[Ints]:
+        """Each station's coarse settings from the shortest path to the longest."""
+        return [np.argsort(station.coarse_paths_m, kind="stable") for station in self.stations]
 
-    def with_settings(self, settings: tuple[int, ...], delays_m: Floats) -> Bools:
-        """Whether stars are in reach with one coarse setting a station, shape (P, ...) to (...)."""
-        return np.asarray((self.lacking_m(settings, delays_m) <= 0).all(axis=0))
+    @cached_property
+    def _paths_m(self) -> list[Floats]:
+        """Fixed path and coarse setting of each station, from the shortest to the longest."""
+        return [
+            station.fixed_path_m + np.asarray(station.coarse_paths_m)[order]
+            for station, order in zip(self.stations, self._order, strict=True)
+        ]
 
-    def lacking_m(self, settings: tuple[int, ...], delays_m: Floats) -> Floats:
-        """By how much each pair falls short with one coarse setting; not positive where it holds. [m]
+    def with_settings(self, settings: tuple[int, ...] | Ints, delays_m: Floats) -> Bools:
+        """Whether stars are in reach with a coarse setting a station: (stations, ...) and (P, ...) to (...)."""
+        return np.asarray((self.lacking_m(settings, delays_m) <= TOLERANCE_M).all(axis=0))
 
-        Shape of `delays_m`, (P, ...).
+    def lacking_m(self, settings: tuple[int, ...] | Ints, delays_m: Floats) -> Floats:
+        """By how much each pair falls short with a coarse setting a station; not positive where it holds. [m]
+
+        Settings, shape (stations, ...), broadcast with the delays, shape (P, ...).
         """
+        paths = [
+            station.fixed_path_m + np.asarray(station.coarse_paths_m)[setting]
+            for station, setting in zip(self.stations, settings, strict=True)
+        ]
         lacking = []
-        for (i, j), offsets, delay in zip(self.pairs, self._offsets_m, delays_m, strict=True):
-            offset = offsets[settings[i], settings[j]]
+        for (i, j), delay in zip(self.pairs, delays_m, strict=True):
+            offset = paths[i] - paths[j]
             lacking.append(
                 np.maximum(offset - self.stations[j].cart_m - delay, delay - offset - self.stations[i].cart_m)
             )
         return np.stack(lacking)
 
-    def _pair_masks(self, delays_m: Floats, allowed: Bools) -> list[list[list[int]]]:
-        """Times, as the bits of an integer, at which a pair holds with each of its settings."""
-        low, high = delays_m.min(axis=1), delays_m.max(axis=1)  # over the stars: (P, T)
-        masks = []
-        for index, (i, j) in enumerate(self.pairs):
-            offset = self._offsets_m[index][:, :, None]
-            holds = (low[index] >= offset - self.stations[j].cart_m) & (
-                high[index] <= offset + self.stations[i].cart_m
-            )
-            packed = np.packbits(holds & allowed, axis=-1, bitorder="little")
-            masks.append([[int.from_bytes(bits.tobytes(), "little") for bits in row] for row in packed])
-        return masks
-
-    def choices(self, delays_m: Floats, allowed: Bools, most: int = 1) -> list[Choice]:
-        """The coarse settings under which all of some stars are in reach together, longest stretch first.
+    def settings_for(self, low_m: Floats, high_m: Floats, slack_m: float = 0.0) -> tuple[Ints, Bools]:
+        """Coarse settings under which blocks stay in reach, those of the shortest paths.
 
         Parameters
         ----------
-        delays_m : array, shape (P, N, T)
-            w_i - w_j of every pair of `pairs`, for N stars at T times.
-        allowed : array of bool, shape (T,)
-            Times that count at all.
-        most : int
-            How many to return; the first is never worse than any other.
+        low_m, high_m : array, shape (P, B)
+            The least and the greatest w_i - w_j of each pair, over the stars and times of a block.
+        slack_m : float
+            What every cart is longer by.
 
         Returns
         -------
-        choices : list
-            Empty if no setting serves at any time; no two with the same times. Every setting is
-            looked at, by a search that drops a branch once it cannot beat the worst of the best `most`.
+        settings : array, shape (stations, B)
+            Index into each station's `coarse_paths_m`.
+        served : array, shape (B,)
+            Whether those settings serve. If not, none do.
+
+        Notes
+        -----
+        Each condition bounds one path from below by another: p_i >= p_j + need_ij. Starting with all paths
+        at their shortest, whatever breaks a bound is lengthened to the next setting that keeps it, until
+        none is broken or no setting is left. No path is ever longer than any solution needs, so that what
+        stands at the end is the solution of shortest paths (the least fixed point of these bounds).
         """
-        count = len(allowed)
-        masks = self._pair_masks(delays_m, allowed)
-        at = {pair: index for index, pair in enumerate(self.pairs)}
-        everything = int.from_bytes(np.packbits(allowed, bitorder="little").tobytes(), "little")
-        found: list[tuple[int, tuple[int, ...], int]] = []
+        carts = [station.cart_m + slack_m for station in self.stations]
+        needs: dict[tuple[int, int], Floats] = {}
+        for (i, j), low, high in zip(self.pairs, low_m, high_m, strict=True):
+            needs[i, j], needs[j, i] = high - carts[i], -low - carts[j]
+        blocks = low_m.shape[1]
+        chosen = np.zeros((len(self.stations), blocks), dtype=np.int64)
+        served = np.ones(blocks, dtype=bool)
+        moving = np.arange(blocks)
+        while len(moving):
+            path = [paths[index] for paths, index in zip(self._paths_m, chosen[:, moving], strict=True)]
+            moved = np.zeros(len(moving), dtype=bool)
+            alive = np.ones(len(moving), dtype=bool)
+            for i, paths in enumerate(self._paths_m):
+                bounds = (path[j] + needs[i, j] for j in range(len(path)) if j != i)
+                needed = reduce(np.maximum, bounds) - TOLERANCE_M / 2
+                short = np.flatnonzero(path[i] < needed)
+                longer = paths.searchsorted(needed[short])
+                out = longer == len(paths)
+                alive[short[out]] = False
+                short, longer = short[~out], longer[~out]
+                moved[short] = True
+                chosen[i, moving[short]] = longer
+                path[i][short] = paths[longer]
+            served[moving[~alive]] = False
+            keep = moved & alive
+            moving = moving[keep]
+            needs = {pair: need[keep] for pair, need in needs.items()}
+        return np.stack([order[index] for order, index in zip(self._order, chosen, strict=True)]), served
 
-        def search(chosen: tuple[int, ...], mask: int) -> None:
-            station = len(chosen)
-            if station == len(self.stations):
-                length = _longest_run(mask)
-                if length and all(mask != other for _, _, other in found):
-                    found.append((-length, chosen, mask))
-                    found.sort()
-                    del found[most:]
-                return
-            for setting in range(len(self.stations[station].coarse_paths_m)):
-                narrowed = mask
-                for earlier, earlier_setting in enumerate(chosen):
-                    narrowed &= masks[at[earlier, station]][earlier_setting][setting]
-                needed = -found[-1][0] if len(found) == most else 0
-                if narrowed.bit_count() > needed:
-                    search((*chosen, setting), narrowed)
-
-        search((), everything)
-        return [self._choice(settings, mask, count) for _, settings, mask in found]
-
-    @staticmethod
-    def _choice(settings: tuple[int, ...], mask: int, count: int) -> Choice:
-        packed = np.frombuffer(mask.to_bytes((count + 7) // 8, "little"), dtype=np.uint8)
-        in_reach = np.unpackbits(packed, bitorder="little")[:count].astype(bool)
-        longest = max(runs(in_reach), key=lambda run: run[1] - run[0], default=None)
-        return Choice(settings, in_reach, longest)
-
-    def worst_pair(self, delays_m: Floats) -> PairFailure | None:
-        """The pair that keeps stars out of reach, None if each pair alone can hold at some time.
+    def longest(self, low_m: Floats, high_m: Floats, allowed: Bools) -> Longest:
+        """The coarse settings that keep blocks in reach for the longest stretch of time.
 
         Parameters
         ----------
-        delays_m : array, shape (P, N, T)
+        low_m, high_m : array, shape (P, B, T)
+            The least and the greatest w_i - w_j of each pair over a block's stars, at T times.
+        allowed : array of bool, shape (B, T)
+            Times that count at all.
+
+        Returns
+        -------
+        Longest
+            No settings serve for longer: every length is tried at every start, by halving, since a stretch
+            that can be served can be served in part.
         """
-        low, high = delays_m.min(axis=1), delays_m.max(axis=1)
-        failures = []
-        for index, (i, j) in enumerate(self.pairs):
-            offset = self._offsets_m[index][:, :, None]
-            lacking = np.maximum(
-                offset - self.stations[j].cart_m - low[index], high[index] - offset - self.stations[i].cart_m
-            ).min()
-            if lacking > 0:
-                names = (self.stations[i].name, self.stations[j].name)
-                failures.append(PairFailure(names, float(lacking)))
-        return max(failures, key=lambda failure: failure.short_by_m, default=None)
+        blocks, times = allowed.shape
+        lows, highs, alloweds = [low_m], [high_m], [allowed]  # over 1, 2, 4, ... steps from each
+        while 2 ** len(lows) <= times and alloweds[-1].any():
+            half = 2 ** (len(lows) - 1)
+            lows.append(np.minimum(lows[-1][..., :-half], lows[-1][..., half:]))
+            highs.append(np.maximum(highs[-1][..., :-half], highs[-1][..., half:]))
+            alloweds.append(alloweds[-1][..., :-half] & alloweds[-1][..., half:])
+        length = np.zeros(blocks, dtype=np.int64)
+        first = np.zeros(blocks, dtype=np.int64)
+        settings = np.zeros((len(self.stations), blocks), dtype=np.int64)
+        block, start = np.nonzero(allowed)  # the stretches that may still grow, and what they span
+        low = np.full((len(self.pairs), len(block)), np.inf)
+        high = -low
+        for level in reversed(range(len(lows))):
+            begin = start + length[block]
+            fits = begin < alloweds[level].shape[1]
+            fits[fits] = alloweds[level][block[fits], begin[fits]]
+            some = np.flatnonzero(fits)
+            at = (slice(None), block[some], begin[some])
+            longer_low = np.minimum(low[:, some], lows[level][at])
+            longer_high = np.maximum(high[:, some], highs[level][at])
+            found, served = self.settings_for(longer_low, longer_high)
+            grown = np.unique(block[some[served]])
+            if not len(grown):
+                continue
+            good = some[served]
+            earliest, where = np.unique(block[good], return_index=True)
+            settings[:, earliest], first[earliest] = found[:, served][:, where], start[good[where]]
+            low[:, good], high[:, good] = longer_low[:, served], longer_high[:, served]
+            length[grown] += 2**level
+            keep = ~np.isin(block, grown)
+            keep[good] = True
+            block, start, low, high = block[keep], start[keep], low[:, keep], high[:, keep]
+        return Longest(settings.T, first, length)
+
+    def shortfall(self, low_m: Floats, high_m: Floats) -> PairFailure:
+        """What keeps a block out of reach: the pair that lacks most, when all carts lack least.
+
+        Parameters
+        ----------
+        low_m, high_m : array, shape (P, T)
+            The least and the greatest w_i - w_j of each pair over the block's stars, at T times.
+
+        Returns
+        -------
+        PairFailure
+            With the metres that the carts would have to grow for some settings to serve at some time.
+        """
+        enough, too_little = 1.0, 0.0
+        while not self.settings_for(low_m, high_m, enough)[1].any():
+            enough, too_little = 2 * enough, enough
+        while enough - too_little > _SHORTFALL_STEP_M:
+            middle = (enough + too_little) / 2
+            if self.settings_for(low_m, high_m, middle)[1].any():
+                enough = middle
+            else:
+                too_little = middle
+        settings, served = self.settings_for(low_m, high_m, enough)
+        when = int(np.flatnonzero(served)[0])
+        both = np.stack([low_m[:, when], high_m[:, when]], axis=1)
+        lacking = self.lacking_m(settings[:, [when]], both).max(axis=1)
+        i, j = self.pairs[int(lacking.argmax())]
+        return PairFailure((self.stations[i].name, self.stations[j].name), float(lacking.max()))
 
 
-def _longest_run(mask: int) -> int:
-    """Length of the longest run of set bits.
-
-    >>> _longest_run(0b1101110)
-    3
-    """
-    length = 0
-    while mask:
-        mask &= mask << 1
-        length += 1
-    return length
+def coarse_paths_m(stations: tuple[Station, ...], settings: tuple[int, ...]) -> dict[str, float]:
+    """The coarse path of each station, by its name."""
+    return {s.name: s.coarse_paths_m[setting] for s, setting in zip(stations, settings, strict=True)}

@@ -18,9 +18,6 @@ from pinlight.ranking.track import track
 
 __all__ = ["best_set", "plan_night", "rank", "track_target"]
 
-# Steps of a ranking's clock; windows are found finer.
-_RANK_STEP_MIN = 10.0
-
 
 def rank(
     catalogue: Catalogue,
@@ -87,7 +84,7 @@ def rank(
         raise InputError(f"a time, {timed}, is given without an array; give the array too")
     clock = None
     if array is not None:
-        clock = make_clock(array, stations, night, at, from_, to, _RANK_STEP_MIN)
+        clock = make_clock(array, stations, night, at, from_, to)
     return rank_columns(
         catalogue.columns(edition),
         resolve_target(catalogue, target),
@@ -139,10 +136,10 @@ def track_target(
 
     Coordinates need no catalogue.
     """
-    clock = make_clock(array_of(array), stations, night, None, from_, to, step_min)
+    clock = make_clock(array_of(array), stations, night, None, from_, to)
     if clock is None:
         raise InputError("from is missing; give from and to, or a night")
-    return track(clock, resolve_target(catalogue, target))
+    return track(clock, resolve_target(catalogue, target), step_min)
 
 
 def plan_night(

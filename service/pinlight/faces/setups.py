@@ -5,7 +5,7 @@ from pathlib import Path
 
 from pinlight.arrays.files import Array, load_array
 from pinlight.errors import InputError, NotFoundError
-from pinlight.ranking.clock import Clock, night_clock, span_clock
+from pinlight.ranking.clock import Clock, moment_clock, night_clock, span_clock
 from pinlight.ranking.setup import Setup, quick_setup, setup_of
 from pinlight.resources import seed_folder
 
@@ -57,7 +57,6 @@ def make_clock(
     at: str | None,
     from_: str | None,
     to: str | None,
-    step_min: float = 5.0,
 ) -> Clock | None:
     """The clock of a night, a moment or a span; None where no time is given.
 
@@ -71,13 +70,13 @@ def make_clock(
         raise InputError(f"{' and '.join(given)} are both given; give a night, a time, or from and to")
     chosen = array.choose_stations(station_names(stations))
     if night is not None:
-        return night_clock(array, chosen, night, step_min)
+        return night_clock(array, chosen, night)
     if at is not None:
-        return span_clock(array, chosen, at, at, step_min)
+        return moment_clock(array, chosen, at)
     if from_ is not None or to is not None:
         if from_ is None or to is None:
             raise InputError(f"{'from' if from_ is None else 'to'} is missing; give both, or a night")
-        return span_clock(array, chosen, from_, to, step_min)
+        return span_clock(array, chosen, from_, to)
     return None
 
 

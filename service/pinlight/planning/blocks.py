@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from pinlight.ranking.sets import kriging_variance
 from pinlight.sky.positions import separation_deg
 
-__all__ = ["Sequence", "StarErrors", "best_sequence", "look_variances"]
+__all__ = ["Sequence", "StarErrors", "best_sequences", "look_variances", "worth_most"]
 
 Floats = NDArray[np.float64]
 
@@ -41,11 +41,13 @@ class Sequence:
     calibrators : which of the K calibrators each calibrator look is at; target looks stand between
         them, one fewer
     error : root mean kriging variance at the target's looks
+    mean_error : of the mean of the target's looks
     minutes : how long it takes
     """
 
     calibrators: tuple[int, ...]
     error: float
+    mean_error: float
     minutes: float
 
     @property
@@ -59,8 +61,8 @@ def look_variances(
     target: tuple[float, float],
     drift: tuple[float, float, float],
     look_min: float,
-) -> Floats:
-    """Mean kriging variance at the target's looks of many sequences of one length.
+) -> tuple[Floats, Floats]:
+    """Kriging variance at the target's looks of many sequences of one length.
 
     Parameters
     ----------
@@ -74,7 +76,9 @@ def look_variances(
 
     Returns
     -------
-    variances : array, shape (A,)
+    each, of_mean : array, shape (A,)
+        The mean of the variances at the target's looks, and the variance of the looks' mean: looks share
+        calibrators, and with them errors.
     """
     spread, time_min, angle_deg = drift
     looks = assignments.shape[1]
@@ -93,47 +97,47 @@ def look_variances(
         * np.exp(-np.abs(target_at[:, None] - calibrator_at[None, :]) / time_min)
     )
     shape = (len(assignments), looks - 1, looks, looks)
-    variance, _ = kriging_variance(np.broadcast_to(covariance[:, None], shape), to_target, spread**2)
-    return variance.mean(axis=1)
+    variance, weights = kriging_variance(np.broadcast_to(covariance[:, None], shape), to_target, spread**2)
+    seen = weights @ covariance @ weights.swapaxes(1, 2)
+    across = weights @ to_target.swapaxes(1, 2)
+    between = spread**2 * np.exp(-np.abs(target_at[:, None] - target_at[None, :]) / time_min)
+    of_mean = (seen - across - across.swapaxes(1, 2) + between).mean(axis=(1, 2))
+    return variance.mean(axis=1), np.maximum(of_mean, 0.0)
 
 
-def best_sequence(
-    stars: StarErrors,
-    target: tuple[float, float],
-    drift: tuple[float, float, float],
-    look_min: float,
-    required_error: float | None = None,
-) -> Sequence:
-    """The sequence of looks that is worth its time most, among all of up to three target looks.
-
-    Without a required error: the least product of variance and time, as time would buy less
-    elsewhere. With one: the shortest that reaches it, or else the one of least error.
+def best_sequences(
+    stars: StarErrors, target: tuple[float, float], drift: tuple[float, float, float], look_min: float
+) -> list[Sequence]:
+    """For one, two and three looks at the target the sequence of least mean kriging variance.
 
     Parameters
     ----------
     stars : StarErrors
-        Calibrators to choose from; four or fewer keep the search short.
+        Calibrators to choose from, in any order and number; four or fewer keep the search short.
     target, drift, look_min
         As `look_variances`.
-    required_error : float, optional
-        Relative.
     """
     count = len(stars.ra_deg)
-    candidates = []
+    sequences = []
     for target_looks in range(1, _MOST_TARGET_LOOKS + 1):
         assignments = np.array(list(product(range(count), repeat=target_looks + 1)), dtype=np.int64)
-        variances = look_variances(stars, assignments, target, drift, look_min)
-        best = int(variances.argmin())
-        candidates.append(
+        each, of_mean = look_variances(stars, assignments, target, drift, look_min)
+        best = int(each.argmin())
+        sequences.append(
             Sequence(
                 tuple(int(star) for star in assignments[best]),
-                float(np.sqrt(variances[best])),
+                float(np.sqrt(each[best])),
+                float(np.sqrt(of_mean[best])),
                 (2 * target_looks + 1) * look_min,
             )
         )
-    if required_error is not None:
-        enough = [sequence for sequence in candidates if sequence.error <= required_error]
-        if enough:
-            return min(enough, key=lambda sequence: sequence.minutes)
-        return min(candidates, key=lambda sequence: sequence.error)
-    return min(candidates, key=lambda sequence: sequence.error**2 * sequence.minutes)
+    return sequences
+
+
+def worth_most(sequences: list[Sequence]) -> Sequence:
+    """The sequence that tells most of the target for its time.
+
+    That is the least product of the time and the variance of the target looks' mean: more looks pay
+    where the field's drift rules, not where the calibrators' own errors do.
+    """
+    return min(sequences, key=lambda sequence: sequence.mean_error**2 * sequence.minutes)

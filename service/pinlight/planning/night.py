@@ -2,32 +2,36 @@
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
+from pinlight.arrays.reach import coarse_paths_m
 from pinlight.errors import InputError
 from pinlight.planning.blocks import Sequence as LookSequence
-from pinlight.planning.blocks import StarErrors, best_sequence, look_variances
+from pinlight.planning.blocks import StarErrors, best_sequences, look_variances, worth_most
 from pinlight.planning.solver import Candidate, choose_blocks
 from pinlight.ranking.budget import TERMS, error_budget, fixed_terms
 from pinlight.ranking.clock import Clock
 from pinlight.ranking.columns import StarColumns
 from pinlight.ranking.rank import rank
+from pinlight.ranking.result import CalibratorSet
 from pinlight.ranking.setup import Setup
 from pinlight.ranking.target import Target
-from pinlight.sky.time import format_utc
+from pinlight.sky.time import format_utc, next_minute
+from pinlight.sky.windows import runs
 from pinlight.version import __version__
 
 __all__ = ["Block", "Look", "NightPlan", "Request", "plan_night"]
 
 Floats = NDArray[np.float64]
 
-_SLOT_MIN = 5.0
 _MINUTE_DAY = 1 / 1440
-# Coarse settings looked at for each block: those that give its stars their longest common windows.
-_SETTINGS = 24
+# Blocks start on whole minutes of UTC: on every fifth, and on the first and last possible ones.
+_EVERY_MIN = 5
 _MOMENTS = 13
 
 
@@ -137,13 +141,21 @@ class NightPlan:
 
 
 @dataclass(frozen=True)
+class _Start:
+    """Where a block may start: the error that it then has, and the coarse setting of each station."""
+
+    error: float
+    settings: tuple[int, ...]
+
+
+@dataclass(frozen=True)
 class _Prepared:
-    """A request with its sequence of looks and all places in time where the block may go."""
+    """A request with its sequence of looks and all minutes of the night at which the block may start."""
 
     request: Request
     pool: NDArray[np.int64]  # rows of the edition that the sequence's calibrators index
     sequence: LookSequence | None
-    slots: dict[int, tuple[float, tuple[int, ...]]]  # slot -> error, coarse setting
+    starts: dict[int, _Start]
     reason: str | None
 
 
@@ -170,7 +182,7 @@ def plan_night(
     setup : Setup
         With a mode and drift.
     clock : Clock
-        Of the night; its grid is replaced by one of five minutes.
+        Of the night.
     standings : mapping, optional
         Star id -> standing.
     time_limit_s : float
@@ -179,7 +191,7 @@ def plan_night(
     Raises
     ------
     InputError
-        If there is no request, or the setup has no mode.
+        If there is no request, the setup has no mode, or the night is shorter than a minute.
     """
     if not requests:
         raise InputError("targets is empty; a plan needs at least one")
@@ -188,49 +200,75 @@ def plan_night(
     if not 0 < time_limit_s <= 3600:
         raise InputError(f"time_limit_s is {time_limit_s:g}; it must lie between 0 and 3600")
     start, end = float(clock.times[0]), float(clock.times[-1])
-    count = int((end - start) / (_SLOT_MIN * _MINUTE_DAY) + 1e-6) + 1
-    grid = replace(clock, times=start + np.arange(count, dtype=np.float64) * _SLOT_MIN * _MINUTE_DAY)
-    coarse = replace(clock, times=np.asarray(np.linspace(start, end, max(count // 2, 2)), dtype=np.float64))
-    prepared = [_prepare(stars, request, setup, coarse, grid, standings or {}) for request in requests]
+    first = next_minute(start)
+    count = int((end - first) / _MINUTE_DAY + 1e-5) + 1
+    if count < 2:
+        raise InputError(f"to is {format_utc(end)}; it must lie a minute or more after {format_utc(start)}")
+    minutes = replace(clock, times=first + np.arange(count, dtype=np.float64) * _MINUTE_DAY)
+    prepared = [_prepare(stars, request, setup, clock, minutes, standings or {}) for request in requests]
+    change_min = clock.array.limits.coarse_change_min
     candidates = [
-        Candidate(index, slot, _slots_of(one.sequence), _worth(one, error))
+        Candidate(index, minute, _whole_minutes(one.sequence.minutes + change_min), _worth(one, where.error))
         for index, one in enumerate(prepared)
         if one.sequence is not None
-        for slot, (error, _) in one.slots.items()
+        for minute, where in one.starts.items()
     ]
     chosen, objective, bound = choose_blocks(
-        candidates, [request.repeats for request in requests], count, time_limit_s
+        candidates, [request.repeats for request in requests], time_limit_s
     )
     blocks = sorted(
-        (_block(stars, prepared[index], setup, grid, slot) for index, slot in chosen),
+        (_block(stars, prepared[index], setup, minutes, minute) for index, minute in chosen),
         key=lambda block: block.start,
     )
     placed = [index for index, _ in chosen]
-    unscheduled = []
-    for index, one in enumerate(prepared):
-        missing = one.request.repeats - placed.count(index)
-        if missing:
-            reason = one.reason or "no room: blocks worth more fill its windows"
-            unscheduled.append((one.request.target.name, reason))
     return NightPlan(
         edition=stars.edition,
         setup=setup,
         span=(start, end),
         blocks=tuple(blocks),
-        unscheduled=tuple(unscheduled),
+        unscheduled=tuple(
+            (one.request.target.name, reason)
+            for index, one in enumerate(prepared)
+            if (reason := _why_missing(one, placed.count(index)))
+        ),
         objective=objective,
         bound=bound,
-        notes=tuple(clock.notes),
+        notes=(*_notes(requests, setup, blocks, change_min), *clock.notes),
     )
 
 
-def _slots_of(sequence: LookSequence) -> int:
-    return int(np.ceil(sequence.minutes / _SLOT_MIN - 1e-9))
+def _whole_minutes(minutes: float) -> int:
+    return int(np.ceil(minutes - 1e-9))
+
+
+def _why_missing(one: _Prepared, placed: int) -> str | None:
+    """Why a request has fewer blocks than it asks for, None if it has them all."""
+    repeats = one.request.repeats
+    if placed == repeats:
+        return None
+    reason = one.reason or "no room: blocks worth more, or its own, fill its windows"
+    return reason if repeats == 1 else f"{placed} of {repeats} blocks placed; {reason}"
+
+
+def _notes(requests: Sequence[Request], setup: Setup, blocks: Sequence[Block], change_min: float) -> list[str]:
+    """What was left out or assumed."""
+    blind = [one.target.name for one in requests if one.target.magnitudes.get(setup.band) is None]
+    notes = []
+    if blind:
+        names = ", ".join(blind)
+        notes.append(f"Without a {setup.band} magnitude the brightness term is left out: {names}.")
+    changes = any(one.coarse_paths_m != following.coarse_paths_m for one, following in pairwise(blocks))
+    if changes and not change_min:
+        notes.append(
+            "No time is kept for changing coarse delay settings between blocks;"
+            " give the array coarse_change_min for it."
+        )
+    return notes
 
 
 def _worth(one: _Prepared, error: float) -> float:
     """Of a block of that error: its weight, less the farther it is from the target's best."""
-    best = min(error for error, _ in one.slots.values())
+    best = min(where.error for where in one.starts.values())
     return best / error / one.request.priority
 
 
@@ -238,13 +276,12 @@ def _prepare(
     stars: StarColumns,
     request: Request,
     setup: Setup,
-    coarse: Clock,
-    grid: Clock,
+    clock: Clock,
+    minutes: Clock,
     standings: Mapping[int, str],
 ) -> _Prepared:
     """Calibrators, sequence and possible starts of one request."""
-    target = request.target
-    ranking = rank(stars, target, setup, clock=coarse, standings=standings, best=10)
+    ranking = rank(stars, request.target, setup, clock=clock, standings=standings, best=10)
 
     def nothing(reason: str) -> _Prepared:
         return _Prepared(request, np.empty(0, dtype=np.int64), None, {}, reason)
@@ -254,29 +291,56 @@ def _prepare(
         return nothing(why.removeprefix("The target cannot be observed then: ").rstrip("."))
     if not ranking.best_sets:
         return nothing("no star passes every gate as its calibrator")
-    row_of = {int(stars.ids[row]): int(row) for row in _rows_of(stars, ranking.best_sets[-1].star_ids)}
-    pool = np.array([row_of[star_id] for star_id in ranking.best_sets[-1].star_ids])
-    look_min = setup.look_interval_min or 0.0
-    errors = _star_errors(stars, pool, setup, target, grid, grid.middle)
-    sequence = best_sequence(
-        errors, (target.ra_deg, target.dec_deg), _drift(setup), look_min, request.required_error
-    )
-    slots = _possible_starts(stars, request, setup, grid, pool, sequence)
-    if not slots:
-        return nothing(f"no window of {sequence.minutes:.0f} min in which it and its calibrators are in reach")
+    start, end = max(ranking.target_windows, key=lambda window: window[1] - window[0])
+    shortest, best = np.inf, np.inf
+    # The largest set first; a smaller one may be in reach for longer.
+    for chosen in reversed(ranking.best_sets):
+        pool = _rows_of(stars, chosen)
+        for sequence in _sequences(stars, pool, setup, request, minutes, (start + end) / 2):
+            starts = _possible_starts(stars, request, setup, minutes, pool, sequence)
+            if not starts:
+                shortest = min(shortest, sequence.minutes)
+                continue
+            if request.required_error is None:
+                return _Prepared(request, pool, sequence, starts, None)
+            best = min(best, *(where.error for where in starts.values()))
+            starts = {m: where for m, where in starts.items() if where.error <= request.required_error}
+            if starts:
+                return _Prepared(request, pool, sequence, starts, None)
+    if np.isfinite(best):
+        wanted = 100 * (request.required_error or 0.0)
+        return nothing(f"required error {wanted:g} % is not reached; the best is {100 * best:.2f} %")
+    within = "" if request.earliest is None and request.latest is None else " within its from and to"
+    return nothing(f"no window of {shortest:.0f} min{within} in which it and its calibrators are in reach")
+
+
+def _sequences(
+    stars: StarColumns,
+    pool: NDArray[np.int64],
+    setup: Setup,
+    request: Request,
+    minutes: Clock,
+    when: float,
+) -> list[LookSequence]:
+    """The sequences to try, in order.
+
+    Without a required error the one that is worth its time most, and shorter ones where that finds no
+    window; with one, from the shortest to the longest.
+    """
+    target = request.target
+    errors = _star_errors(stars, pool, setup, target, minutes, when)
+    place = (target.ra_deg, target.dec_deg)
+    sequences = best_sequences(errors, place, _drift(setup), setup.look_interval_min or 0.0)
     if request.required_error is not None:
-        good = {slot: found for slot, found in slots.items() if found[0] <= request.required_error}
-        if not good:
-            best = 100 * min(error for error, _ in slots.values())
-            return nothing(
-                f"required error {100 * request.required_error:g} % is not reached; the best is {best:.2f} %"
-            )
-        slots = good
-    return _Prepared(request, pool, sequence, slots, None)
+        return sequences
+    favourite = worth_most(sequences)
+    return [one for one in reversed(sequences) if one.minutes <= favourite.minutes]
 
 
-def _rows_of(stars: StarColumns, star_ids: Sequence[int]) -> NDArray[np.int64]:
-    return np.flatnonzero(np.isin(stars.ids, list(star_ids)))
+def _rows_of(stars: StarColumns, chosen: CalibratorSet) -> NDArray[np.int64]:
+    """Rows of the edition, in the order of the set."""
+    rows = np.flatnonzero(np.isin(stars.ids, list(chosen.star_ids)))
+    return rows[np.argsort([chosen.star_ids.index(int(star_id)) for star_id in stars.ids[rows]])]
 
 
 def _drift(setup: Setup) -> tuple[float, float, float]:
@@ -318,40 +382,47 @@ def _possible_starts(
     stars: StarColumns,
     request: Request,
     setup: Setup,
-    grid: Clock,
+    minutes: Clock,
     pool: NDArray[np.int64],
     sequence: LookSequence,
-) -> dict[int, tuple[float, tuple[int, ...]]]:
-    """Every slot where the block can start, with its error and coarse setting."""
-    target = request.target
+) -> dict[int, _Start]:
+    """Minutes at which the block can start, with its error and the coarse setting that holds throughout."""
+    target, lines = request.target, minutes.delay_lines
     rows = np.unique(pool[list(sequence.calibrators)])
     pm_ra, pm_dec, parallax, velocity = stars.motion(rows)
-    star_ra, star_dec = grid.apparent(
+    star_ra, star_dec = minutes.apparent(
         stars.ra_deg[rows], stars.dec_deg[rows], (pm_ra, pm_dec, parallax, velocity)
     )
-    target_ra, target_dec = grid.apparent(target.ra_deg, target.dec_deg, target.motion)
+    target_ra, target_dec = minutes.apparent(target.ra_deg, target.dec_deg, target.motion)
     ra, dec = np.append(star_ra, target_ra)[:, None], np.append(star_dec, target_dec)[:, None]
-    allowed = np.asarray(grid.observable(ra, dec, grid.times).all(axis=0))
-    if request.earliest is not None:
-        allowed &= grid.times >= request.earliest
-    if request.latest is not None:
-        allowed &= grid.times <= request.latest
-    choices = grid.delay_lines.choices(grid.delays_m(ra, dec, grid.times), allowed, _SETTINGS)
-    length = _slots_of(sequence)
-    starts: dict[int, tuple[int, ...]] = {}
-    for choice in choices:
-        counts = np.concatenate([[0], np.cumsum(choice.in_reach)])
-        whole = np.flatnonzero(counts[length + 1 :] - counts[: -length - 1] == length + 1)
-        for slot in whole.tolist():
-            starts.setdefault(slot, choice.settings)
-    if not starts:
+    allowed = np.asarray(minutes.observable(ra, dec, minutes.times).all(axis=0))
+    steps = _whole_minutes(sequence.minutes) + 1  # times that a block touches, both its ends included
+    if steps > len(allowed):
         return {}
-    slots = np.array(sorted(starts))
+    starts = np.flatnonzero(sliding_window_view(allowed, steps).all(axis=1))
+    begin = minutes.times[starts]
+    if request.earliest is not None:
+        starts = starts[begin >= request.earliest - 1e-9]
+    if request.latest is not None:
+        starts = starts[minutes.times[starts] + sequence.minutes * _MINUTE_DAY <= request.latest + 1e-9]
+    delays = minutes.delays_m(ra, dec, minutes.times)
+    low = sliding_window_view(delays.min(axis=1), steps, axis=1)[:, starts].min(axis=-1)
+    high = sliding_window_view(delays.max(axis=1), steps, axis=1)[:, starts].max(axis=-1)
+    settings, served = lines.settings_for(low, high)
+    starts, settings = starts[served], settings[:, served]
+    if not len(starts):
+        return {}
+    possible = np.zeros(len(allowed), dtype=bool)
+    possible[starts] = True
+    edges = {minute for stretch in runs(possible) for minute in stretch}
+    kept = [place for place, minute in enumerate(starts) if minute % _EVERY_MIN == 0 or int(minute) in edges]
     # The error changes slowly with the projected baselines: worked out at a few starts, interpolated.
-    moments = np.unique(slots[np.linspace(0, len(slots) - 1, _MOMENTS).round().astype(int)])
-    errors = [_error_at(stars, pool, setup, target, grid, sequence, int(slot)) for slot in moments]
-    between = np.interp(slots, moments, errors)
-    return {int(slot): (float(error), starts[int(slot)]) for slot, error in zip(slots, between, strict=True)}
+    moments = np.unique(starts[np.linspace(0, len(starts) - 1, _MOMENTS).round().astype(int)])
+    errors = [_error_at(stars, pool, setup, target, minutes, sequence, int(minute)) for minute in moments]
+    between = np.interp(starts, moments, errors)
+    return {
+        int(starts[place]): _Start(float(between[place]), tuple(settings[:, place].tolist())) for place in kept
+    }
 
 
 def _error_at(
@@ -359,27 +430,26 @@ def _error_at(
     pool: NDArray[np.int64],
     setup: Setup,
     target: Target,
-    grid: Clock,
+    minutes: Clock,
     sequence: LookSequence,
-    slot: int,
+    minute: int,
 ) -> float:
-    """The error of a block that starts in a slot, with the baselines of its middle."""
-    middle = float(grid.times[slot]) + sequence.minutes / 2 * _MINUTE_DAY
-    errors = _star_errors(stars, pool, setup, target, grid, middle)
+    """The error of a block that starts at a minute, with the baselines of its middle."""
+    middle = float(minutes.times[minute]) + sequence.minutes / 2 * _MINUTE_DAY
+    errors = _star_errors(stars, pool, setup, target, minutes, middle)
     assignment = np.array([sequence.calibrators], dtype=np.int64)
     place = (target.ra_deg, target.dec_deg)
-    variance = look_variances(errors, assignment, place, _drift(setup), setup.look_interval_min or 0.0)
-    return float(np.sqrt(variance[0]))
+    each, _ = look_variances(errors, assignment, place, _drift(setup), setup.look_interval_min or 0.0)
+    return float(np.sqrt(each[0]))
 
 
-def _block(stars: StarColumns, one: _Prepared, setup: Setup, grid: Clock, slot: int) -> Block:
-    """The block of a request at a slot; its error is worked out anew, not interpolated."""
+def _block(stars: StarColumns, one: _Prepared, setup: Setup, minutes: Clock, minute: int) -> Block:
+    """The block of a request at a minute; its error is worked out anew, not interpolated."""
     assert one.sequence is not None
-    _, settings = one.slots[slot]
-    start = float(grid.times[slot])
+    start = float(minutes.times[minute])
     look_day = (setup.look_interval_min or 0.0) * _MINUTE_DAY
     target = one.request.target
-    error = _error_at(stars, one.pool, setup, target, grid, one.sequence, slot)
+    error = _error_at(stars, one.pool, setup, target, minutes, one.sequence, minute)
     looks = []
     calibrators = one.pool[list(one.sequence.calibrators)]
     for index, row in enumerate(calibrators):
@@ -389,8 +459,5 @@ def _block(stars: StarColumns, one: _Prepared, setup: Setup, grid: Clock, slot: 
         )
         if index < len(calibrators) - 1:
             looks.append(Look("target", target.name, target.star_id, begin + look_day, begin + 2 * look_day))
-    paths = {
-        station.name: station.coarse_paths_m[setting]
-        for station, setting in zip(grid.stations, settings, strict=True)
-    }
+    paths = coarse_paths_m(minutes.stations, one.starts[minute].settings)
     return Block(target.name, start, looks[-1].end, paths, error, tuple(looks))

@@ -21,14 +21,15 @@ from pinlight.sky.positions import unit_vectors
 from pinlight.sky.time import has_rotation_data, parse_utc, rotation_angle_deg
 from pinlight.sky.windows import find_windows
 
-__all__ = ["Clock", "night_clock", "span_clock"]
+__all__ = ["Clock", "moment_clock", "night_clock", "span_clock"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
 _MINUTE_DAY = 1 / 1440
-_GRID_MIN = 5.0
+_STEP_MIN = 5.0  # what a ranking and the choice of coarse settings look at
 _MOST_STEPS = 20_000
+_FINE_STEP_MIN = 1.0  # what windows are made of before their edges are found
 _LONGEST_SPAN_DAY = 2.0
 
 
@@ -61,6 +62,30 @@ class Clock:
         first, second = np.array(self.delay_lines.pairs).T
         return np.asarray(np.linalg.norm(self._xyz_m[first] - self._xyz_m[second], axis=-1))
 
+    @cached_property
+    def fine_times(self) -> Floats:
+        """Times of the same span a minute apart."""
+        return _even_times(float(self.times[0]), float(self.times[-1]), _FINE_STEP_MIN)
+
+    def every(self, step_min: float) -> Floats:
+        """Times of the same span, a step apart from its start, and its end.
+
+        Raises
+        ------
+        InputError
+            If the step is impossible, or makes over 20 000 times.
+        """
+        if not 0 < step_min <= 1440:
+            raise InputError(f"step_min is {step_min:g}; it must lie between 0 and 1440")
+        first, last = float(self.times[0]), float(self.times[-1])
+        steps = (last - first) / (step_min * _MINUTE_DAY)
+        if steps > _MOST_STEPS:
+            raise InputError(
+                f"step_min is {step_min:g}; that makes {steps:.0f} steps, and {_MOST_STEPS} are the most"
+            )
+        times = first + np.arange(int(steps + 1e-6) + 1, dtype=np.float64) * step_min * _MINUTE_DAY
+        return times if last - times[-1] < 1e-6 else np.append(times, last)
+
     @property
     def middle(self) -> float:
         return float((self.times[0] + self.times[-1]) / 2)
@@ -81,8 +106,8 @@ class Clock:
         """Apparent places of date of ICRS positions at the middle of the span, shape (N,)."""
         return apparent_place_deg(ra_deg, dec_deg, self.middle, motion)
 
-    # Sun, Moon and the Earth's rotation are computed on the grid and interpolated between its times:
-    # in ten minutes their paths bend by less than an arcsecond.
+    # Moon and the Earth's rotation are computed on the grid and interpolated between its times, the Sun on
+    # the hours: their paths bend by less than an arcsecond between.
 
     @cached_property
     def _rotation_deg(self) -> Floats:
@@ -90,15 +115,20 @@ class Clock:
 
     @cached_property
     def _sun(self) -> Floats:
-        return sun_vectors(self.times)
+        return sun_vectors(self._hours)
+
+    @cached_property
+    def _hours(self) -> Floats:
+        return _even_times(float(self.times[0]), float(self.times[-1]), 60.0)
 
     @cached_property
     def _moon(self) -> Floats:
         return moon_vectors(self.times, self.site)
 
-    def _between(self, on_grid: Floats, times: ArrayLike) -> Floats:
+    @staticmethod
+    def _between(nodes: Floats, directions: Floats, times: ArrayLike) -> Floats:
         """Directions at any time of the span, shape of `times` + (3,), as unit vectors."""
-        parts = np.stack([np.interp(np.asarray(times, float), self.times, part) for part in on_grid.T], axis=-1)
+        parts = np.stack([np.interp(np.asarray(times, float), nodes, part) for part in directions.T], axis=-1)
         return parts / np.linalg.norm(parts, axis=-1, keepdims=True)
 
     def hour_angle_deg(self, ra_deg: ArrayLike, times: ArrayLike) -> Floats:
@@ -126,7 +156,7 @@ class Clock:
 
     def dark(self, times: ArrayLike) -> Bools:
         """Whether the Sun is below the array's limit, shape of `times`."""
-        sun = self._between(self._sun, times)
+        sun = self._between(self._hours, self._sun, times)
         h = np.radians(self.hour_angle_deg(np.degrees(np.arctan2(sun[..., 1], sun[..., 0])), times))
         phi = np.radians(self.site.latitude_deg)
         height = np.sin(phi) * sun[..., 2] + np.cos(phi) * np.hypot(sun[..., 0], sun[..., 1]) * np.cos(h)
@@ -134,13 +164,15 @@ class Clock:
 
     def above(self, ra_deg: ArrayLike, dec_deg: ArrayLike, times: ArrayLike) -> Bools:
         """Whether places stand above the altitude limit and every station's horizon."""
-        altitude, azimuth = altitude_azimuth_deg(
-            self.hour_angle_deg(ra_deg, times), dec_deg, self.site.latitude_deg
-        )
+        hour_angle = self.hour_angle_deg(ra_deg, times)
+        h, d, latitude = np.radians(hour_angle), np.radians(dec_deg), np.radians(self.site.latitude_deg)
         lowest = self.array.limits.altitude_min_deg
-        holds = altitude >= lowest
-        for station in self.stations:
-            if max((height for _, height in station.horizon), default=0.0) > lowest:
+        height = np.sin(latitude) * np.sin(d) + np.cos(latitude) * np.cos(d) * np.cos(h)
+        holds = height >= np.sin(np.radians(lowest))
+        walled = [s for s in self.stations if max((top for _, top in s.horizon), default=0.0) > lowest]
+        if walled:
+            altitude, azimuth = altitude_azimuth_deg(hour_angle, dec_deg, self.site.latitude_deg)
+            for station in walled:
                 holds &= altitude >= self.horizon_deg(station, azimuth)
         return np.asarray(holds)
 
@@ -154,7 +186,7 @@ class Clock:
 
     def moon_clear(self, ra_deg: ArrayLike, dec_deg: ArrayLike, times: ArrayLike) -> Bools:
         """Whether places are far enough from the Moon; it counts while it is below the horizon too."""
-        moon = self._between(self._moon, times)
+        moon = self._between(self.times, self._moon, times)
         toward = unit_vectors(ra_deg, dec_deg)
         cosine = toward[..., 0] * moon[..., 0] + toward[..., 1] * moon[..., 1] + toward[..., 2] * moon[..., 2]
         return np.asarray(cosine <= np.cos(np.radians(self.array.limits.moon_distance_min_deg)))
@@ -164,34 +196,32 @@ class Clock:
         return self.dark(times) & self.above(ra_deg, dec_deg, times) & self.moon_clear(ra_deg, dec_deg, times)
 
 
-def span_clock(
-    array: Array, stations: tuple[Station, ...], start: str, end: str, step_min: float = _GRID_MIN
-) -> Clock:
+def moment_clock(array: Array, stations: tuple[Station, ...], at: str) -> Clock:
+    """The clock of one moment of UTC; raises InputError if it is none."""
+    return Clock(array, stations, np.array([parse_utc(at, "at")]))
+
+
+def span_clock(array: Array, stations: tuple[Station, ...], start: str, end: str) -> Clock:
     """The clock of a span of UTC.
 
     Raises
     ------
     InputError
-        If a time is none, the span is empty or longer than two days, or `step_min` is impossible.
+        If a time is none, or the span is empty or longer than two days.
     """
     first, last = parse_utc(start, "from"), parse_utc(end, "to")
     if not first <= last <= first + _LONGEST_SPAN_DAY:
         raise InputError(f"to is {end}; it must lie within two days after from, {start}")
-    steps = int(_steps(last - first, step_min) + 1e-6)
-    times: Floats = first + np.arange(steps + 1, dtype=np.float64) * step_min * _MINUTE_DAY
-    if last - times[-1] > 1e-6:
-        times = np.append(times, last)
-    return Clock(array, stations, times)
+    return Clock(array, stations, _even_times(first, last, _STEP_MIN))
 
 
-def night_clock(array: Array, stations: tuple[Station, ...], night: str, step_min: float = _GRID_MIN) -> Clock:
+def night_clock(array: Array, stations: tuple[Station, ...], night: str) -> Clock:
     """The clock of the dark hours that follow the noon of a date at the site.
 
     Raises
     ------
     InputError
-        If the date is none, the Sun does not go below the array's limit that night, or `step_min` is
-        impossible.
+        If the date is none, or the Sun does not go below the array's limit that night.
     """
     if len(night.strip()) > 10:
         raise InputError(f"night is {night!r}; write the date of its evening, such as 2026-12-01")
@@ -203,17 +233,10 @@ def night_clock(array: Array, stations: tuple[Station, ...], night: str, step_mi
         limit = array.limits.sun_altitude_max_deg
         raise InputError(f"night is {night}; at {array.name} the Sun does not go below {limit:g} deg then")
     start, end = max(windows, key=lambda window: window[1] - window[0])
-    steps = max(round(_steps(end - start, step_min)), 1)
-    times: Floats = start + (end - start) / steps * np.arange(steps + 1, dtype=np.float64)
-    return Clock(array, stations, times)
+    return Clock(array, stations, _even_times(start, end, _STEP_MIN))
 
 
-def _steps(span_day: float, step_min: float) -> float:
-    if not 0 < step_min <= 1440:
-        raise InputError(f"step_min is {step_min:g}; it must lie between 0 and 1440")
-    steps = span_day / (step_min * _MINUTE_DAY)
-    if steps > _MOST_STEPS:
-        raise InputError(
-            f"step_min is {step_min:g}; that makes {steps:.0f} steps, and {_MOST_STEPS} are the most"
-        )
-    return steps
+def _even_times(first: float, last: float, step_min: float) -> Floats:
+    """Times from first to last, evenly apart, by `step_min` at the most."""
+    steps = int(np.ceil((last - first) / (step_min * _MINUTE_DAY) - 1e-6))
+    return np.asarray(np.linspace(first, last, steps + 1), dtype=np.float64)

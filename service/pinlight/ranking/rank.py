@@ -2,10 +2,12 @@
 
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pinlight.arrays.reach import coarse_paths_m
 from pinlight.diameters.limb_darkening import uniform_disk_ratio
 from pinlight.errors import InputError
 from pinlight.ranking.budget import SECOND_LOBE_V2, TERMS, Budget, error_budget, fixed_terms, lowest_v2
@@ -111,9 +113,7 @@ def rank(
         _calibrator(stars, ranked, standings, index, windows[index] if windows else None)
         for index in range(min(best, len(ranked.rows)))
     ]
-    members = np.arange(min(SET_CANDIDATES, len(ranked.rows)))
-    moments = _moments(stars, ranked, reach, members)
-    sets = _best_sets(stars, ranked, target, setup, judge, members, moments)
+    sets = _best_sets(stars, ranked, target, setup, judge, reach)
     named = None
     if with_ids:
         named = _named_set(stars, target, setup, judge, limits, with_ids, assess, reach)
@@ -132,7 +132,7 @@ def rank(
         best_sets=tuple(sets),
         named_set=named,
         span=None if clock is None else (float(clock.times[0]), float(clock.times[-1])),
-        target_windows=None if reach is None else tuple(reach.target_windows()),
+        target_windows=None if reach is None else tuple(reach.target_windows),
         coarse_paths_m=_coarse_paths(reach),
         names=_names(stars, [*sets, *([named] if named else [])]),
         notes=tuple(_notes(setup, limits, target, reach)),
@@ -166,8 +166,18 @@ def _assess(
     else:
         lengths_m = np.broadcast_to(setup.baselines_m, (len(rows), len(setup.baselines)))
     longest = lengths_m.max(axis=1)
-    fixed = fixed_terms(stars, rows, separations, setup, target.magnitudes.get(setup.band))
+    magnitude = target.magnitudes.get(setup.band)
+    fixed = fixed_terms(stars, rows, separations, setup, magnitude)
     order, budget, resolved = _in_order(stars, rows, setup, fixed, judge, lengths_m, limits.v2_min, most)
+    count = len(rows) - resolved
+    if reach is not None:
+        # Of the best, the one coarse setting that serves star and target for longest, and its baselines.
+        rows, separations = rows[order], separations[order]
+        together = reach.longest(stars, rows)
+        lengths_m, longest = together.baselines_m, together.baselines_m.max(axis=1)
+        fixed = fixed_terms(stars, rows, separations, setup, magnitude)
+        order, budget, more = _in_order(stars, rows, setup, fixed, judge, lengths_m, limits.v2_min, most)
+        count, resolved = count - more, resolved + more
     if resolved:
         excluded["resolved"] = resolved
     return _Ranked(
@@ -176,7 +186,7 @@ def _assess(
         budget=budget,
         longest_m=longest[order],
         reach=None if together is None else together.only(order),
-        count=len(rows) - resolved,
+        count=count,
         excluded=excluded,
     )
 
@@ -221,7 +231,8 @@ def _windows(
 ) -> list[list[Window]] | None:
     if reach is None or ranked.reach is None:
         return None
-    return reach.windows(stars, ranked.rows[:best], ranked.reach.times[:best], ranked.reach.choice[:best])
+    assert ranked.reach.settings is not None
+    return reach.windows(stars, ranked.rows[:best], ranked.reach.settings[:best])
 
 
 def _calibrator(
@@ -299,28 +310,20 @@ def _set_covariance(
     return errors + field, errors + field * apart, to_target, drift.spread**2
 
 
-def _moments(
-    stars: StarColumns, ranked: _Ranked, reach: TargetReach | None, members: NDArray[np.int64]
-) -> NDArray[np.bool_] | None:
-    """When some ranked stars are in reach, shape (M, ...), under each coarse setting that any has."""
-    if reach is None or ranked.reach is None or not len(members):
-        return None
-    return reach.together(stars, ranked.rows[members], np.unique(ranked.reach.choice[members]))
-
-
 def _best_sets(
     stars: StarColumns,
     ranked: _Ranked,
     target: Target,
     setup: Setup,
     judge: str,
-    members: NDArray[np.int64],
-    moments: NDArray[np.bool_] | None,
+    reach: TargetReach | None,
 ) -> list[CalibratorSet]:
+    members = np.arange(min(SET_CANDIDATES, len(ranked.rows)))
     if not len(members):
         return []
     covariance = _set_covariance(stars, ranked, target, setup, judge, members)
-    found = best_subsets(*covariance, moments=moments)
+    possible = None if reach is None else partial(reach.ever_together, stars, ranked.rows[members])
+    found = best_subsets(*covariance, possible=possible)
     return [
         CalibratorSet(tuple(int(stars.ids[ranked.rows[member]]) for member in subset), float(np.sqrt(variance)))
         for subset, variance in found
@@ -355,8 +358,7 @@ def _named_set(
     rows, separations = np.array(members).T
     ranked = assess(rows.astype(np.int64), separations)
     everyone = np.arange(len(members))
-    moments = _moments(stars, ranked, reach, everyone)
-    if moments is not None and not moments.all(axis=0).any():
+    if reach is not None and not reach.ever_together(stars, ranked.rows, everyone[None])[0]:
         raise InputError(
             "with names stars that are never in reach together with the target under one coarse setting"
         )
@@ -372,13 +374,9 @@ def _names(stars: StarColumns, sets: list[CalibratorSet]) -> dict[int, str]:
 
 
 def _coarse_paths(reach: TargetReach | None) -> dict[str, float] | None:
-    if reach is None or not reach.choices:
+    if reach is None or reach.settings is None:
         return None
-    settings = reach.choices[0].settings
-    return {
-        station.name: station.coarse_paths_m[setting]
-        for station, setting in zip(reach.clock.stations, settings, strict=True)
-    }
+    return coarse_paths_m(reach.clock.stations, reach.settings)
 
 
 def _notes(setup: Setup, limits: Thresholds, target: Target, reach: TargetReach | None) -> list[str]:

@@ -1,5 +1,6 @@
 """Sets of calibrators: ordinary kriging of the transfer function, and the best set of each size."""
 
+from collections.abc import Callable
 from functools import lru_cache
 from itertools import combinations
 
@@ -20,6 +21,7 @@ Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
 LARGEST_SET = 4
+_BATCH = 256  # subsets asked for at a time whether they are possible
 _CHUNK = 4096  # subsets at a time: their arrays then stay in the processor's cache
 
 
@@ -170,27 +172,41 @@ def best_subsets(
     to_target: Floats,
     sill: float,
     largest: int = LARGEST_SET,
-    moments: Bools | None = None,
+    possible: Callable[[NDArray[np.int64]], Bools] | None = None,
 ) -> list[tuple[tuple[int, ...], float]]:
     """The best subset of each size from 1, by trying all of them: members and variance.
 
-    Parameters as of `subset_variances`, and `moments`, shape (M, T): when each look is possible. A
-    subset needs a moment in common, and a size without any such subset is left out. Members stand in
-    the order of the rows.
+    Parameters as of `subset_variances`, and `possible`, a function that tells of subsets, shape (N, K),
+    which can be looked at together, shape (N,); what holds of a set holds of its parts. A size without
+    any such subset is left out. Members stand in the order of the rows.
     """
-    words = None
-    if moments is not None and not moments.all(axis=0).any():
-        packed = np.packbits(moments, axis=1)
-        words = np.pad(packed, ((0, 0), (0, -packed.shape[1] % 8))).view(np.uint64)
     count = len(to_target)
     best = []
+    pairs: Bools | None = None
     for size in range(1, min(largest, count) + 1):
         subsets = _all_subsets(count, size)
-        if words is not None:
-            subsets = subsets[np.bitwise_and.reduce(words[subsets], axis=1).any(axis=1)]
-            if not len(subsets):
-                break
         variances = subset_variances(same_side, other_side, to_target, sill, subsets)
         winner = int(variances.argmin())
+        if possible is not None and size > 1 and not possible(subsets[[winner]])[0]:
+            if pairs is None:
+                pairs = _pairs_possible(count, possible)
+            left = np.flatnonzero(
+                np.all([pairs[subsets[:, i], subsets[:, j]] for i, j in combinations(range(size), 2)], axis=0)
+            )
+            left = left[np.argsort(variances[left], kind="stable")]
+            batches = (left[start : start + _BATCH] for start in range(0, len(left), _BATCH))
+            found = (batch[possible(subsets[batch])] for batch in batches)
+            first = next((int(batch[0]) for batch in found if len(batch)), None)
+            if first is None:
+                break
+            winner = first
         best.append((tuple(int(member) for member in subsets[winner]), float(variances[winner])))
     return best
+
+
+def _pairs_possible(count: int, possible: Callable[[NDArray[np.int64]], Bools]) -> Bools:
+    """Which pairs of some looks are possible together, shape (M, M)."""
+    together = np.zeros((count, count), dtype=bool)
+    pairs = _all_subsets(count, 2)
+    together[tuple(pairs.T)] = possible(pairs)
+    return together

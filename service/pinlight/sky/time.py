@@ -13,7 +13,14 @@ from numpy.typing import ArrayLike, NDArray
 
 from pinlight.errors import InputError
 
-__all__ = ["ROTATION_ACCURACY_S", "format_utc", "has_rotation_data", "parse_utc", "rotation_angle_deg"]
+__all__ = [
+    "ROTATION_ACCURACY_S",
+    "format_utc",
+    "has_rotation_data",
+    "next_minute",
+    "parse_utc",
+    "rotation_angle_deg",
+]
 
 Floats = NDArray[np.float64]
 
@@ -70,6 +77,17 @@ def format_utc(mjd_tai: float) -> str:
     year, month, day, clock, _ = erfa.ufunc.d2dtf(b"UTC", 0, utc1, utc2)
     hour, minute, second = (int(clock[key]) for key in ("h", "m", "s"))
     return f"{int(year):04d}-{int(month):02d}-{int(day):02d}T{hour:02d}:{minute:02d}:{second:02d}Z"
+
+
+def next_minute(mjd_tai: float) -> float:
+    """The first whole minute of UTC that is not before a time.
+
+    >>> format_utc(next_minute(parse_utc("2026-12-01T20:15:01Z")))
+    '2026-12-01T20:16:00Z'
+    """
+    utc1, utc2 = _utc_parts(mjd_tai)
+    minutes = ((utc1 - _MJD) + utc2) * 1440
+    return float(mjd_tai + (np.ceil(minutes - 1e-5) - minutes) / 1440)
 
 
 @lru_cache(maxsize=1)
