@@ -101,3 +101,51 @@ def test_what_is_no_use_is_told(tmp_path, north):
     for name in ("text.fits", "missing.fits"):
         with pytest.raises(InputError, match=f"cannot read .*{name} as OIFITS"):
             array_file_from_oifits(tmp_path / name)
+
+
+def changed(path, extension, change):
+    with fits.open(path, mode="update") as file:
+        change(file[extension])
+    return path
+
+
+def test_what_the_file_leaves_undefined_is_a_blank(tmp_path, north):
+    def forget(table):
+        table.data["STAXYZ"][1] = np.nan
+
+    path = changed(oifits(tmp_path / "a.fits", north), "OI_ARRAY", forget)
+
+    def forget_wave(table):
+        table.data["EFF_WAVE"][0] = np.nan
+
+    text = array_file_from_oifits(changed(path, "OI_WAVELENGTH", forget_wave))
+    assert text.count('east_m = "?"') == 1
+    assert 'wavelength_um = "?"' in text
+    assert 'band = "?"' in text
+    assert "nan" not in text
+
+
+def test_an_impossible_table_is_named(tmp_path, north):
+    def far(table):
+        table.header["ARRAYX"] = 5e9
+
+    with pytest.raises(InputError, match=r"puts the array 5e\+06 km from the Earth's centre"):
+        array_file_from_oifits(changed(oifits(tmp_path / "far.fits", north), "OI_ARRAY", far))
+
+    def twice(table):
+        table.data["STA_NAME"][1] = table.data["STA_NAME"][0]
+
+    with pytest.raises(InputError, match="has stations named Ash more than once"):
+        array_file_from_oifits(changed(oifits(tmp_path / "twice.fits", north), "OI_ARRAY", twice))
+
+    def blank(table):
+        table.data["STA_NAME"][1] = ""
+
+    with pytest.raises(InputError, match="has stations named a blank more than once or not at all"):
+        array_file_from_oifits(changed(oifits(tmp_path / "blank.fits", north), "OI_ARRAY", blank))
+
+    def words(table):
+        table.header["ARRAYY"] = "somewhere"
+
+    with pytest.raises(InputError, match=r"cannot read .*words\.fits as OIFITS"):
+        array_file_from_oifits(changed(oifits(tmp_path / "words.fits", north), "OI_ARRAY", words))

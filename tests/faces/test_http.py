@@ -199,7 +199,7 @@ def test_a_plan_over_http(client):
     ("change", "detail"),
     [
         ({"targets": []}, "targets is []"),
-        ({"targets": [{"ra_deg": 1}]}, "targets[0].dec_deg is missing"),
+        ({"targets": [{"ra_deg": 1}]}, "dec_deg of a target is missing"),
         ({"targets": [{"ra_deg": 1, "dec_deg": 95}]}, "dec_deg is 95"),
         ({"targets": [{"ra_deg": 1, "dec_deg": 5, "priority": 0}]}, "priority of"),
         ({"night": None}, "night is missing"),

@@ -1,5 +1,7 @@
 """A night plan, every block of it checked by code that shares nothing with the planner but the sky."""
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 
@@ -8,10 +10,11 @@ from pinlight.faces.library import plan_night as plan
 from pinlight.faces.models import PlanAnswer
 from pinlight.faces.targets import read_requests
 from pinlight.fringes.companions import suspected_companion_error
-from pinlight.planning.night import Request, _star_errors
-from pinlight.ranking.budget import fixed_terms
+from pinlight.planning.night import Request, _Prepared, _star_errors, _Start, _worth
+from pinlight.ranking.budget import error_budget, fixed_terms
 from pinlight.ranking.clock import night_clock
 from pinlight.ranking.columns import flag_bits
+from pinlight.ranking.sets import field_covariance
 from pinlight.ranking.setup import setup_of
 from pinlight.ranking.target import Target
 from pinlight.resources import seed_folder
@@ -90,6 +93,154 @@ def test_every_block_satisfies_every_constraint(night, catalogue, north, request
     assert night.objective <= night.bound + 1e-9
 
 
+def test_a_blocks_error_is_the_kriging_of_its_looks_by_loops(night, catalogue, north, requests):
+    clock = night_clock(north, north.station, NIGHT)
+    columns, setup = catalogue.columns(), setup_of(north, None, "H")
+    drift, look = setup.drift, setup.look_interval_min
+    for block in night.blocks:
+        target = next(r.target for r in requests if r.target.name == block.target)
+        ids = [one.star_id for one in block.looks if one.role == "calibrator"]
+        rows = np.array([int(np.flatnonzero(columns.ids == star_id)[0]) for star_id in ids])
+        # Projected baselines of each star in the middle of the block, from u and v.
+        motion = tuple(columns.motion(rows))
+        places = clock.apparent(columns.ra_deg[rows], columns.dec_deg[rows], motion)
+        uvw = clock.uvw_m(*places, np.full(len(rows), (block.start + block.end) / 2))
+        lengths = np.hypot(uvw[..., 0], uvw[..., 1])
+        fixed = fixed_terms(columns, rows, np.zeros(len(rows)), setup, target.magnitudes["H"])
+        budget = error_budget(columns, rows, setup, fixed | {"drift": None}, "rms", lengths)
+        count = len(rows)
+        errors = np.zeros((count, count))
+        for i in range(count):
+            for j in range(count):
+                if rows[i] == rows[j]:
+                    # One star in two looks: all but the photon noise is the same error twice.
+                    errors[i, j] = sum(
+                        term[i] ** 2
+                        for name, term in budget.terms.items()
+                        if term is not None and name not in ("drift", "photon")
+                    )
+                elif columns.relations_used[rows[i]] & columns.relations_used[rows[j]]:
+                    relative = [columns.shared_error_mas[r] / columns.diameter_mas[r] for r in rows[[i, j]]]
+                    errors[i, j] = np.mean(budget.slopes[i] * budget.slopes[j]) * relative[0] * relative[1]
+                if i == j:
+                    errors[i, j] += budget.terms["photon"][i] ** 2
+        assert budget.terms["brightness"].max() > 0
+        ra, dec = (
+            np.append(columns.ra_deg[rows], target.ra_deg),
+            np.append(columns.dec_deg[rows], target.dec_deg),
+        )
+        variances = []
+        for between in range(count - 1):
+            minutes = np.append(2 * look * np.arange(count), look * (2 * between + 1))
+            field = field_covariance(drift.spread, drift.time_min, drift.angle_deg, minutes, ra, dec)
+            system = np.ones((count + 1, count + 1))
+            system[:count, :count] = field[:-1, :-1] + errors
+            system[count, count] = 0
+            right = np.append(field[:-1, -1], 1)
+            variances.append(drift.spread**2 - np.linalg.solve(system, right) @ right)
+        assert block.calibration_error == pytest.approx(np.sqrt(np.mean(variances)), rel=1e-4)
+
+
+def test_priority_decides_who_gets_the_only_room(catalogue, north):
+    target, until = {"magnitudes": {"H": 4.0}}, parse_utc("2026-12-01T19:40Z")
+    for first, second in ((3.0, 1.0), (1.0, 3.0)):
+        pair = [
+            Request(Target(60.0, 28.0, name=f"Twin {p:g}", **target), priority=p, latest=until)
+            for p in (first, second)
+        ]
+        night = plan(catalogue, pair, array=north, mode="H", from_="2026-12-01T18:50Z", to="2026-12-01T19:40Z")
+        assert [block.target for block in night.blocks] == ["Twin 1"]
+        assert night.objective == pytest.approx(1.0, abs=0.01)
+
+
+def test_a_block_is_worth_less_the_farther_its_error_is_from_the_best():
+    starts = {0: _Start(0.02, ()), 5: _Start(0.04, ())}
+    one = _Prepared(Request(Target(60.0, 28.0), priority=2.0), np.empty(0, dtype=np.int64), None, starts, None)
+    assert _worth(one, 0.02) == pytest.approx(1 / 2)
+    assert _worth(one, 0.04) == pytest.approx(1 / 4)
+
+
+def test_a_free_block_stands_where_its_error_is_least(catalogue, north):
+    request = Request(Target(60.0, 28.0, name="Free", magnitudes={"H": 4.0}))
+    [block] = plan(catalogue, [request], array=north, mode="H", night=NIGHT).blocks
+    errors = []
+    for hour in range(18, 29):
+        day, clock_hour = divmod(hour, 24)
+        earliest = parse_utc(f"2026-12-{1 + day:02d}T{clock_hour:02d}:00Z")
+        bounded = Request(request.target, earliest=earliest, latest=earliest + 1 / 24)
+        errors += [
+            one.calibration_error
+            for one in plan(catalogue, [bounded], array=north, mode="H", night=NIGHT).blocks
+        ]
+    assert len(errors) > 3
+    assert block.calibration_error <= min(errors) * 1.001
+
+
+def test_a_time_window_that_just_fits_a_block_is_used(catalogue, north):
+    target = Target(60.0, 28.0, name="Tight", magnitudes={"H": 4.0})
+    free = plan(catalogue, [Request(target)], array=north, mode="H", night=NIGHT).blocks[0]
+    length = free.end - free.start
+    earliest = parse_utc("2026-12-01T22:03Z")
+    just = Request(target, earliest=earliest, latest=earliest + length + 1e-6)
+    [block] = plan(catalogue, [just], array=north, mode="H", night=NIGHT).blocks
+    assert block.start == pytest.approx(earliest, abs=1e-6)
+    # A little less leaves room for fewer looks, much less for none.
+    less = Request(target, earliest=earliest, latest=earliest + length - 2 / 1440)
+    assert all(
+        len(one.looks) < len(block.looks)
+        for one in plan(catalogue, [less], array=north, mode="H", night=NIGHT).blocks
+    )
+    short = Request(target, earliest=earliest, latest=earliest + 20 / 1440)
+    night = plan(catalogue, [short], array=north, mode="H", night=NIGHT)
+    assert night.blocks == ()
+    assert "within its from and to" in dict(night.unscheduled)["Tight"]
+
+
+def test_terms_left_out_and_changes_without_time_are_noted(catalogue, north):
+    requests = [
+        Request(Target(60.0, 28.0, name="Blind")), Request(Target(20.0, 40.0, magnitudes={"H": 4.0}, name="Seen")),
+        Request(Target(110.0, 30.0, magnitudes={"H": 4.0}, name="Later")),
+    ]  # fmt: skip
+    night = plan(catalogue, requests, array=north, mode="H", night=NIGHT)
+    assert "Without a H magnitude the brightness term is left out: Blind." in night.notes
+    assert any("No time is kept for changing coarse delay settings" in note for note in night.notes)
+    limits = north.limits.model_copy(update={"coarse_change_min": 12.0})
+    slow = plan(catalogue, requests, array=north.model_copy(update={"limits": limits}), mode="H", night=NIGHT)
+    assert not any("No time is kept" in note for note in slow.notes)
+    assert len(slow.blocks) == 3
+    for one, following in pairwise(slow.blocks):
+        assert following.start - one.end >= 12 / 1440 - 1e-9
+
+
+def test_blocks_that_are_wanted_again_and_find_no_room_are_counted(catalogue, north):
+    target = Target(60.0, 28.0, name="Often", magnitudes={"H": 4.0})
+    night = plan(
+        catalogue, [Request(target, repeats=20)], array=north, mode="H",
+        from_="2026-12-01T19:00Z", to="2026-12-01T22:00Z",
+    )  # fmt: skip
+    placed = len(night.blocks)
+    assert 1 < placed < 20
+    assert (
+        dict(night.unscheduled)["Often"]
+        == f"{placed} of 20 blocks placed; no room: other blocks fill its windows"
+    )
+
+
+def test_a_target_may_be_named_alone(catalogue, tmp_path):
+    name = catalogue.columns().names[int(np.flatnonzero(catalogue.columns().dec_deg > 20)[0])].decode()
+    (tmp_path / "t.csv").write_text(f"name,priority,H\n{name},2,3.5\n", encoding="utf-8")
+    [request] = read_requests(tmp_path / "t.csv", catalogue)
+    assert request.target.star_id is not None
+    assert request.target.motion is not None
+    assert request.target.magnitudes["H"] == 3.5
+    (tmp_path / "u.csv").write_text("name\nNo Such Star\n", encoding="utf-8")
+    with pytest.raises(InputError, match=r"u\.csv line 2: .*No Such Star"):
+        read_requests(tmp_path / "u.csv", catalogue)
+    (tmp_path / "v.csv").write_text("name,ra_deg,dec_deg\nHalf,10,\n", encoding="utf-8")
+    with pytest.raises(InputError, match="dec_deg of Half is missing"):
+        read_requests(tmp_path / "v.csv", catalogue)
+
+
 def test_a_plan_charges_a_calibrator_for_its_companions_as_a_ranking_does(catalogue, north):
     columns, setup = catalogue.columns(), setup_of(north, None, "H")
     component = np.uint64(flag_bits("component"))
@@ -135,7 +286,7 @@ def test_no_room_is_a_reason(catalogue, north):
     same = [Request(Target(60.0, 28.0, name=f"Twin {i}", **target), latest=until) for i in range(12)]
     night = plan(catalogue, same, array=north, mode="H", night=NIGHT)
     assert night.blocks
-    assert "no room: blocks worth more fill its windows" in dict(night.unscheduled).values()
+    assert "no room: other blocks fill its windows" in dict(night.unscheduled).values()
 
 
 def test_a_required_error_is_kept_and_a_time_window_too(catalogue, north):

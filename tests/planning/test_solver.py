@@ -73,7 +73,7 @@ def test_starts_need_no_common_grid():
 def test_a_plan_the_solver_had_no_time_for_is_greedy_and_its_bound_is_honest(monkeypatch):
     from ortools.sat.python import cp_model
 
-    monkeypatch.setattr(cp_model.CpSolver, "solve", lambda self, model: cp_model.UNKNOWN)
+    monkeypatch.setattr(cp_model.CpSolver, "solve", lambda *_: cp_model.UNKNOWN)
     candidates, repeats, slots = random_night(np.random.default_rng(8))
     chosen, objective, bound = choose_blocks(candidates, repeats, 5.0)
     assert check(candidates, repeats, slots, chosen) == pytest.approx(objective)

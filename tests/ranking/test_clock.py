@@ -1,6 +1,6 @@
 """Geometry, reach and windows against astropy and against brute force."""
 
-from itertools import product
+from itertools import pairwise, product
 
 import numpy as np
 import pytest
@@ -88,6 +88,9 @@ def test_uvw_agree_with_astropys_altaz_to_five_millimetres(north, trial):
     gentle = np.abs(dec) < 80
     # East of date differs from east of J2000 by the turn of precession, up to half a degree here.
     assert np.abs(uvw[gentle][..., 0] - (east @ enu)[gentle]).max() < 0.02 * np.linalg.norm(enu)
+    # v points north: what is left of a right-handed set, north = toward x east.
+    north_of = np.cross(toward, east)
+    assert np.abs(uvw[gentle][..., 1] - (north_of @ enu)[gentle]).max() < 0.02 * np.linalg.norm(enu)
 
 
 def test_sun_and_moon_agree_with_astropy(north):
@@ -389,6 +392,18 @@ def test_a_tracks_windows_do_not_depend_on_its_step(north):
                 for edge in w.values()
             )
             assert near or inside == at["in_reach"] == (at["blocked_by"] == [])
+
+
+def test_hour_angles_are_positive_in_the_west(north):
+    # Common practice, no source: past the meridian a star stands in the west and sinks.
+    times = track(night_clock(north, north.station, "2026-12-01"), Target(60.0, 20.0), 30.0)["times"]
+    hours = [at["hour_angle_h"] for at in times]
+    assert min(hours) < -3
+    assert max(hours) > 3
+    for at, after in pairwise(times):
+        assert (at["hour_angle_h"] > 0) == (180 < at["azimuth_deg"] < 360)
+        if abs(at["hour_angle_h"]) > 0.6 and after["hour_angle_h"] > at["hour_angle_h"]:
+            assert (after["altitude_deg"] < at["altitude_deg"]) == (at["hour_angle_h"] > 0)
 
 
 def test_a_mast_too_thin_for_the_grid_still_splits_a_window(north):

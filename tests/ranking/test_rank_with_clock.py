@@ -1,5 +1,7 @@
 """Ranking with a clock: reach, windows and projected baselines."""
 
+from itertools import product
+
 import numpy as np
 import pytest
 
@@ -12,6 +14,7 @@ from pinlight.ranking.reach import reach_of_target
 from pinlight.ranking.setup import setup_of
 from pinlight.ranking.target import Target
 from pinlight.sky.time import parse_utc
+from pinlight.sky.windows import runs
 from tests.ranking.stars import columns
 
 TARGET = Target(60.0, 28.0, magnitudes={"H": 4.0})
@@ -48,6 +51,43 @@ def test_every_calibrator_has_windows_inside_the_night_and_its_conditions(answer
 def test_baselines_are_projected(answer):
     longest = max(pair.length_m for pair in answer.setup.baselines)
     assert all(0.3 * longest < star.longest_baseline_m < longest for star in answer.calibrators)
+
+
+def test_baselines_are_those_of_two_moments_of_the_window(answer, north):
+    # At a fifth and at four fifths of the star's time with the target; projected lengths from u and v.
+    clock = night_clock(north, north.station, "2026-12-01")
+    for star in answer.calibrators:
+        within = [
+            time
+            for time in clock.times
+            if any(start - 1e-6 <= time <= end + 1e-6 for start, end in star.windows)
+        ]
+        u, v, _ = np.moveaxis(clock.uvw_m(*clock.apparent(star.ra_deg, star.dec_deg), np.array(within)), -1, 0)
+        longest = np.hypot(u, v).max(axis=1)
+        moments = [int(np.ceil(part * len(within))) - 1 for part in (0.2, 0.8)]
+        near = [longest[max(m - 1, 0) : m + 2] for m in moments]
+        # Window edges and the star's proper motion may shift a moment by a step of five minutes.
+        low, high = max(one.min() for one in near), max(one.max() for one in near)
+        assert low - 0.01 <= star.longest_baseline_m <= high + 0.01
+
+
+def test_no_other_coarse_setting_serves_star_and_target_for_longer(catalogue, north):
+    array = north.model_copy(update={"station": north.station[:4]})
+    found = rank_named(catalogue, TARGET, array=array, mode="H", night="2026-12-01", best=6)
+    clock = night_clock(array, array.station, "2026-12-01")
+    target_place = clock.apparent(TARGET.ra_deg, TARGET.dec_deg)
+    for star in found.calibrators:
+        place = clock.apparent(star.ra_deg, star.dec_deg)
+        allowed = clock.observable(*place, clock.times) & clock.observable(*target_place, clock.times)
+        delays = [clock.delays_m(*p, clock.times) for p in (place, target_place)]
+        best = 0
+        for k in product(*(range(len(s.coarse_paths_m)) for s in array.station)):
+            holds = allowed & np.all([clock.delay_lines.with_settings(k, d) for d in delays], axis=0)
+            best = max([best, *(last - first for first, last in runs(holds))])
+        longest = max(end - start for start, end in star.windows)
+        step = clock.times[1] - clock.times[0]
+        assert longest >= best * step - 1e-6
+        assert longest <= (best + 2) * step
 
 
 def test_the_json_has_windows_and_coarse_paths(answer):

@@ -1,16 +1,18 @@
 """Calibrator sets against a Monte Carlo of the field and against exhaustive search."""
 
-from itertools import combinations
+from itertools import combinations, product
 
 import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from pinlight.ranking.budget import error_budget, fixed_terms
 from pinlight.ranking.rank import rank
 from pinlight.ranking.sets import best_subsets, field_covariance, kriging_variance, subset_variances
 from pinlight.ranking.setup import quick_setup, setup_of
 from pinlight.ranking.target import Target
+from pinlight.sky.positions import separation_deg
 from tests.ranking.stars import columns
 
 TARGET = Target(100.0, 21.0, magnitudes={"V": 6.0, "H": 4.0, "Ks": 3.9})
@@ -79,7 +81,13 @@ def test_members_of_a_set_have_a_moment_in_common(trial):
     field, errors = looks(random, 8)
     covariance, to_target = field[:-1, :-1] + errors, field[:-1, -1]
     moments = random.random((8, 70)) < 0.12
-    best = best_subsets(covariance, covariance, to_target, 0.04**2, moments=moments)
+    best = best_subsets(
+        covariance,
+        covariance,
+        to_target,
+        0.04**2,
+        possible=lambda subsets: moments[subsets].all(axis=1).any(axis=1),
+    )
     for size in (1, 2, 3, 4):
         possible = {
             subset: float(
@@ -147,6 +155,57 @@ def test_a_set_of_one_costs_what_its_star_costs(north):
     assert best[0].calibration_error == pytest.approx(answer.calibrators[0].calibration_error, rel=1e-9)
     errors = [one.calibration_error for one in best]
     assert errors == sorted(errors, reverse=True)
+
+
+@pytest.mark.parametrize("judge", ["rms", "worst"])
+def test_a_sets_error_by_the_bordered_system_written_out(north, judge):
+    # Stars around the target, two before its look and two after, in the way that serves best.
+    setup = setup_of(north, None, "H")
+    target = Target(100.0, 20.0, magnitudes={"H": 4.5})
+    stars = columns(
+        [
+            {"ra_deg": 100.0 + east, "dec_deg": 20.0 + up, "theta": theta, "own": 0.01, "shared": 0.02}
+            for east, up, theta in ((2, 1, 0.5), (-3, 2, 0.7), (1, -4, 0.35), (5, 3, 0.6))
+        ]
+    )
+    found = rank(stars, target, setup, judge=judge)
+    assert [len(one.star_ids) for one in found.best_sets] == [1, 2, 3, 4]
+    by_id = {c.star_id: c for c in found.calibrators}
+    minutes, drift = setup.look_interval_min, setup.drift
+    rows = np.arange(4)
+    lengths = np.broadcast_to(setup.baselines_m, (4, len(setup.baselines)))
+    fixed = fixed_terms(stars, rows, np.zeros(4), setup, 4.5)
+    slopes = dict(zip(stars.ids, error_budget(stars, rows, setup, fixed, judge, lengths).slopes, strict=True))
+
+    def shared(a, b):
+        """Mean product of the sensitivities, or that where each is steepest, times the shared errors."""
+        product = np.mean(slopes[a] * slopes[b]) if judge == "rms" else slopes[a].min() * slopes[b].min()
+        return product * (0.02 / by_id[a].limb_darkened_mas) * (0.02 / by_id[b].limb_darkened_mas)
+
+    def variance(ids, sides):
+        size = len(ids)
+        system = np.zeros((size + 1, size + 1))
+        right = np.ones(size + 1)
+        for i, a in enumerate(ids):
+            for j, b in enumerate(ids):
+                apart = separation_deg(by_id[a].ra_deg, by_id[a].dec_deg, by_id[b].ra_deg, by_id[b].dec_deg)
+                lag = 0 if sides[i] == sides[j] else 2 * minutes
+                system[i, j] = drift.spread**2 * np.exp(-lag / drift.time_min - apart / drift.angle_deg)
+                if a == b:
+                    terms = {k: v for k, v in by_id[a].budget.items() if k != "drift" and v is not None}
+                    system[i, j] += sum(v**2 for v in terms.values())
+                else:
+                    system[i, j] += shared(a, b)
+            away = separation_deg(by_id[a].ra_deg, by_id[a].dec_deg, 100.0, 20.0)
+            right[i] = drift.spread**2 * np.exp(-minutes / drift.time_min - away / drift.angle_deg)
+            system[i, size] = system[size, i] = 1
+        return drift.spread**2 - np.linalg.solve(system, right) @ right
+
+    for one in found.best_sets[1:]:
+        size = len(one.star_ids)
+        halves = [s for s in product((0, 1), repeat=size) if sum(s) in (size // 2, size - size // 2)]
+        best = min(variance(one.star_ids, sides) for sides in halves)
+        assert one.calibration_error == pytest.approx(np.sqrt(best), rel=1e-6)
 
 
 def test_without_drift_sets_average_the_stars_own_errors_but_not_the_shared():

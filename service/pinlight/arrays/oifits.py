@@ -13,6 +13,8 @@ from pinlight.photometry.bands import nearest_band
 __all__ = ["array_file_from_oifits"]
 
 _WGS84 = 1
+# The poles and the highest mountains, with a few kilometres to spare.
+_LEAST_RADIUS_M, _GREATEST_RADIUS_M = 6.35e6, 6.40e6
 _BLANK = '"?"'
 
 
@@ -55,8 +57,10 @@ def _array_file(path: Path, tables: list[tuple[str, dict[str, Any], Any]]) -> st
             f"the OI_ARRAY table of {path} has FRAME {frame}; only GEOCENTRIC says where stations are"
         )
     centre = np.array([float(header[f"ARRAY{axis}"]) for axis in "XYZ"])
-    if np.linalg.norm(centre) < 6e6:
-        raise InputError(f"the OI_ARRAY table of {path} puts the array's centre inside the Earth")
+    from_earths_centre = float(np.linalg.norm(centre))
+    if not _LEAST_RADIUS_M < from_earths_centre < _GREATEST_RADIUS_M:
+        where = f"{from_earths_centre / 1000:g} km from the Earth's centre"
+        raise InputError(f"the OI_ARRAY table of {path} puts the array {where}; the ground is at 6360 to 6390")
     longitude, latitude, height = erfa.gc2gd(_WGS84, centre)
     stations = np.asarray(data["STAXYZ"], dtype=float) @ _east_north_up(longitude, latitude).T
     lines = [
@@ -79,14 +83,18 @@ def _array_file(path: Path, tables: list[tuple[str, dict[str, Any], Any]]) -> st
         ),
     ]  # fmt: skip
     names = [str(name).strip() for name in data["STA_NAME"]]
+    if unfit := [name or "a blank" for name in names if not name or names.count(name) > 1]:
+        raise InputError(
+            f"the OI_ARRAY table of {path} has stations named {unfit[0]} more than once or not at all"
+        )
     for name, (east, north, up) in zip(names, stations, strict=True):
         lines += [
             "",
             "[[station]]",
             f"name = {_text(name)}",
-            f"east_m = {east:.4f}",
-            f"north_m = {north:.4f}",
-            f"up_m = {up:.4f}",
+            f"east_m = {_number(east, 4)}",
+            f"north_m = {_number(north, 4)}",
+            f"up_m = {_number(up, 4)}",
             *(f"{key} = {_BLANK}" for key in ("fixed_path_m", "coarse_paths_m", "cart_m", "horizon")),
         ]
     for name, wavelength_header, wavelengths in tables:
@@ -106,12 +114,13 @@ _MODE_BLANKS = (
 
 def _mode(header: dict[str, Any], data: Any) -> list[str]:
     waves, widths = (np.asarray(data[key], dtype=float) * 1e6 for key in ("EFF_WAVE", "EFF_BAND"))
+    middle = float(waves.mean())
     low, high = (waves - widths / 2).min(), (waves + widths / 2).max()
     return [
         f"name = {_text(header.get('INSNAME') or 'mode')}",
-        f"band = {_text(nearest_band(float(waves.mean()), ('B', 'V', 'J', 'H', 'Ks')))}",
-        f"wavelength_um = {(low + high) / 2:.5f}",
-        f"bandwidth_um = {high - low:.5f}",
+        f"band = {_text(nearest_band(middle, ('B', 'V', 'J', 'H', 'Ks'))) if np.isfinite(middle) else _BLANK}",
+        f"wavelength_um = {_number((low + high) / 2, 5)}",
+        f"bandwidth_um = {_number(high - low, 5)}",
         f"channels = {len(waves)}",
         *(f"{key} = {_BLANK}" for key in _MODE_BLANKS),
     ]
@@ -132,6 +141,11 @@ def _east_north_up(longitude: float, latitude: float) -> np.ndarray:
             [cos_lat * cos_lon, cos_lat * sin_lon, sin_lat],
         ]
     )
+
+
+def _number(value: float, digits: int) -> str:
+    """A TOML number; what the file leaves undefined is a blank."""
+    return f"{value:.{digits}f}" if np.isfinite(value) else _BLANK
 
 
 def _text(value: Any) -> str:

@@ -133,7 +133,7 @@ def rank(
 
     catalogue = open_catalogue(db)
     in_file = target.lower().endswith(".csv") or is_file(target)
-    targets = read_targets(Path(target)) if in_file else [target]
+    targets = read_targets(Path(target), catalogue) if in_file else [target]
     options |= {"stations": _names(stations), "with_": _names(with_)}
     rankings = [rank_target(catalogue, one, **options) for one in targets]
     if as_json:
@@ -335,8 +335,8 @@ def plan(
     for option, path in papers_asked.items():
         if path is not None and (other := taken.setdefault(path.resolve(), option)) != option:
             raise InputError(f"{option} is {path}, which is also {other}; name another file")
-    requests = read_requests(targets)
-    night = plan_night(open_catalogue(db), requests, stations=_names(stations), **options)
+    catalogue = open_catalogue(db)
+    night = plan_night(catalogue, read_requests(targets, catalogue), stations=_names(stations), **options)
     if any(papers_asked.values()):
         from pinlight.faces import papers
 

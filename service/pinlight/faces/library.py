@@ -78,6 +78,8 @@ def rank(
     CatalogueError
         If the catalogue cannot be read.
     """
+    if with_ is not None and not with_:
+        raise InputError("with is empty; name the stars of a set, parted by commas")
     array = None if array is None else array_of(array)
     setup = make_setup(array, stations, mode, baseline_m, wavelength_um)
     if array is None and (timed := night or at or from_ or to):

@@ -34,18 +34,17 @@ def _split(value: Any) -> Any:
 NameOrPlace = Annotated[str, Field(max_length=200, description="A star's name, or coordinates.")]
 
 
-class TargetQuestion(_Question):
-    """A target of the caller's own; ICRS, epoch 2000."""
-
-    ra_deg: float
-    dec_deg: float
-    name: str = ""
+class _KnownOfTarget(_Question):
+    name: Annotated[str, Field(max_length=200)] = ""
     magnitudes: dict[str, float] = Field(default_factory=dict)
     diameter_mas: float | None = None
 
 
-def _kind_of_target(value: Any) -> str:
-    return "own-target" if isinstance(value, dict | TargetQuestion) else "named-target"
+class TargetQuestion(_KnownOfTarget):
+    """A target of the caller's own; ICRS, epoch 2000."""
+
+    ra_deg: float
+    dec_deg: float
 
 
 class RankingQuestion(_Question):
@@ -75,9 +74,11 @@ class RankingQuestion(_Question):
     with_: Annotated[list[str] | None, BeforeValidator(_split), Field(alias="with")] = None
 
 
-class PlanTarget(TargetQuestion):
-    """A target that a night is wanted for; priority 1 counts most."""
+class PlanTarget(_KnownOfTarget):
+    """A target that a night is wanted for; priority 1 counts most. Without a place its name tells it."""
 
+    ra_deg: float | None = None
+    dec_deg: float | None = None
     priority: float = 1.0
     repeats: int = 1
     required_error_percent: float | None = None

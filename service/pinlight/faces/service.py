@@ -14,6 +14,7 @@ from pinlight.errors import InputError
 from pinlight.faces.library import plan_night, rank
 from pinlight.faces.models import PlanQuestion, RankingQuestion, TargetQuestion
 from pinlight.faces.setups import named_array
+from pinlight.faces.targets import placed_target
 from pinlight.planning.night import NightPlan, Request
 from pinlight.ranking.result import Ranking
 from pinlight.ranking.target import Target
@@ -80,7 +81,10 @@ def answer_plan(question: PlanQuestion) -> NightPlan:
     known = service()
     requests = []
     for one in question.targets:
-        target = Target(**one.model_dump(include={"ra_deg", "dec_deg", "name", "magnitudes", "diameter_mas"}))
+        target = placed_target(
+            known.catalogue,
+            **one.model_dump(include={"ra_deg", "dec_deg", "name", "magnitudes", "diameter_mas"}),
+        )
         required = one.required_error_percent
         requests.append(
             Request(
@@ -88,8 +92,8 @@ def answer_plan(question: PlanQuestion) -> NightPlan:
                 one.priority,
                 one.repeats,
                 None if required is None else required / 100,
-                parse_utc(one.from_, "from") if one.from_ else None,
-                parse_utc(one.to, "to") if one.to else None,
+                parse_utc(one.from_, f"from of {target.name}") if one.from_ else None,
+                parse_utc(one.to, f"to of {target.name}") if one.to else None,
             )
         )
     return plan_night(

@@ -1,19 +1,20 @@
 """Targets from what people write: names, coordinates, CSV files."""
 
 import csv
+from dataclasses import replace
 from difflib import get_close_matches
 from pathlib import Path
 from typing import Any
 
 from pinlight.catalogue.store import Catalogue
-from pinlight.errors import InputError
+from pinlight.errors import InputError, NotFoundError
 from pinlight.photometry.bands import BANDS
 from pinlight.planning.night import Request
 from pinlight.ranking.target import Target
 from pinlight.sky.positions import looks_like_coordinates, parse_coordinates
 from pinlight.sky.time import parse_utc
 
-__all__ = ["read_requests", "read_targets", "resolve_target"]
+__all__ = ["placed_target", "read_requests", "read_targets", "resolve_target"]
 
 _TARGET_COLUMNS = (
     "name", "ra_deg", "dec_deg", "diameter_mas", *BANDS, "priority", "repeats", "required_error_percent",
@@ -48,6 +49,35 @@ def resolve_target(catalogue: Catalogue | None, target: str | Target) -> Target:
     )
 
 
+def placed_target(
+    catalogue: Catalogue | None,
+    name: str,
+    ra_deg: float | None,
+    dec_deg: float | None,
+    magnitudes: dict[str, float],
+    diameter_mas: float | None,
+) -> Target:
+    """A target at a place, or without one the star that the catalogue knows by its name.
+
+    What is given of that star counts before what the catalogue has.
+
+    Raises
+    ------
+    InputError, NotFoundError
+        If one coordinate is missing, or the name is unknown.
+    """
+    if ra_deg is not None and dec_deg is not None:
+        return Target(ra_deg, dec_deg, name=name, magnitudes=magnitudes, diameter_mas=diameter_mas)
+    if ra_deg is not None or dec_deg is not None:
+        raise InputError(f"{'dec_deg' if dec_deg is None else 'ra_deg'} of {name or 'a target'} is missing")
+    if not name.strip():
+        raise InputError("name is missing; a target needs ra_deg and dec_deg, or a name the catalogue knows")
+    known = resolve_target(catalogue, name)
+    return replace(
+        known, magnitudes={**known.magnitudes, **magnitudes}, diameter_mas=diameter_mas or known.diameter_mas
+    )
+
+
 def _motion(star: dict[str, Any]) -> tuple[float, float, float, float]:
     """As `Target` has it; what the catalogue does not know is NaN."""
     pm_ra, pm_dec, parallax, velocity = (
@@ -57,23 +87,25 @@ def _motion(star: dict[str, Any]) -> tuple[float, float, float, float]:
     return pm_ra, pm_dec, parallax, velocity
 
 
-def read_targets(path: Path) -> list[Target]:
+def read_targets(path: Path, catalogue: Catalogue | None = None) -> list[Target]:
     """Targets from a CSV file with columns name, ra_deg, dec_deg and, if known, diameter_mas and bands.
 
-    Other columns are left to whoever needs them.
+    Without coordinates a row's name is looked up in the catalogue. Other columns are left to whoever
+    needs them.
 
     Raises
     ------
     InputError
         If the file cannot be read or a row is wrong; the message names the line.
     """
-    return [request.target for request in read_requests(path)]
+    return [request.target for request in read_requests(path, catalogue)]
 
 
-def read_requests(path: Path) -> list[Request]:
+def read_requests(path: Path, catalogue: Catalogue | None = None) -> list[Request]:
     """Targets with what a plan wants of each: columns priority, repeats, required_error_percent, from, to.
 
     All of these may be missing or blank: priority 1, one block, any error, any time of the night.
+    Targets as `read_targets` takes them.
 
     Raises
     ------
@@ -90,14 +122,14 @@ def read_requests(path: Path) -> list[Request]:
                     continue
                 row = {column: cell.strip() for column, cell in zip(columns, cells, strict=False)}
                 try:
-                    requests.append(_request(row))
-                except InputError as error:
+                    requests.append(_request(row, catalogue))
+                except (InputError, NotFoundError) as error:
                     raise InputError(f"{path} line {reader.line_num}: {error}") from error
     except (OSError, UnicodeDecodeError, csv.Error) as error:
         reason = error.strerror if isinstance(error, OSError) else error
         raise InputError(f"cannot read targets file {path}: {reason}") from error
     if not requests:
-        raise InputError(f"targets file {path} has no rows; it needs columns name, ra_deg, dec_deg")
+        raise InputError(f"targets file {path} has no rows; it needs a column name, and ra_deg, dec_deg")
     return requests
 
 
@@ -105,7 +137,8 @@ def _targets_columns(path: Path, header: list[str]) -> list[str]:
     """The columns of a targets file, as this project spells them, whatever their case."""
     spelled = {name.casefold(): name for name in _TARGET_COLUMNS}
     columns = [spelled.get(cell.strip().casefold(), cell.strip()) for cell in header]
-    missing = [name for name in ("name", "ra_deg", "dec_deg") if name not in columns]
+    place = ("ra_deg", "dec_deg") if "ra_deg" in columns or "dec_deg" in columns else ()
+    missing = [name for name in ("name", *place) if name not in columns]
     if missing:
         found = ", ".join(header)[:80] or "none"
         lacking = f"{', '.join(missing)} missing (commas part them)"
@@ -118,10 +151,9 @@ def _targets_columns(path: Path, header: list[str]) -> list[str]:
     return columns
 
 
-def _request(written: dict[str, str]) -> Request:
-    for column in ("name", "ra_deg", "dec_deg"):
-        if not written.get(column):
-            raise InputError(f"{column} is missing")
+def _request(written: dict[str, str], catalogue: Catalogue | None) -> Request:
+    if not written.get("name"):
+        raise InputError("name is missing")
     values: dict[str, float] = {}
     numbers = ("ra_deg", "dec_deg", "diameter_mas", *BANDS, "priority", "repeats", "required_error_percent")
     for column in numbers:
@@ -134,12 +166,13 @@ def _request(written: dict[str, str]) -> Request:
     if not repeats.is_integer():
         raise InputError(f"repeats is {repeats:g}; it must be a whole number")
     required = values.get("required_error_percent")
-    target = Target(
-        values["ra_deg"],
-        values["dec_deg"],
-        name=written["name"],
-        magnitudes={band: values[band] for band in BANDS if band in values},
-        diameter_mas=values.get("diameter_mas"),
+    target = placed_target(
+        catalogue,
+        written["name"],
+        values.get("ra_deg"),
+        values.get("dec_deg"),
+        {band: values[band] for band in BANDS if band in values},
+        values.get("diameter_mas"),
     )
     return Request(
         target,

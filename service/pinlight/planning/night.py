@@ -246,8 +246,8 @@ def _why_missing(one: _Prepared, placed: int) -> str | None:
     repeats = one.request.repeats
     if placed == repeats:
         return None
-    reason = one.reason or "no room: blocks worth more, or its own, fill its windows"
-    return reason if repeats == 1 else f"{placed} of {repeats} blocks placed; {reason}"
+    reason = one.reason or "no room: other blocks fill its windows"
+    return reason if one.reason or repeats == 1 else f"{placed} of {repeats} blocks placed; {reason}"
 
 
 def _notes(requests: Sequence[Request], setup: Setup, blocks: Sequence[Block], change_min: float) -> list[str]:

@@ -95,7 +95,10 @@ class Clock:
         """What the answer's accuracy suffers from."""
         if has_rotation_data(self.times).all():
             return []
-        return ["No Earth-rotation data for this date: times and windows are good to a second."]
+        return [
+            "No Earth-rotation data for this date, so UT1 is taken as UTC: windows are good to a second"
+            " until 2035, later to the minute by which the two may then differ."
+        ]
 
     def apparent(
         self,
