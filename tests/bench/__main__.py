@@ -80,7 +80,7 @@ def main() -> None:
     show("rank one target, 15 baselines, 5 channels", median_s(lambda: rank(columns, target, setup), 20))
 
     array = known_arrays()["north"]
-    clock = night_clock(array, array.station, "2026-12-01", 10.0)
+    clock = night_clock(array, array.station, "2026-12-01")
     rows, _ = columns.cone(target.ra_deg, target.dec_deg, 15.0)
     field = SkyCoord(np.array(columns.ra_deg[rows]), np.array(columns.dec_deg[rows]), unit="deg")
     iers.conf.auto_download, iers.conf.auto_max_age = False, None
@@ -101,7 +101,7 @@ def main() -> None:
     )
 
     def with_clock() -> Any:
-        return rank(columns, target, setup, clock=night_clock(array, array.station, "2026-12-01", 10.0))
+        return rank(columns, target, setup, clock=night_clock(array, array.station, "2026-12-01"))
 
     show("rank one target for a night, clock included", median_s(with_clock, 20))
     random = np.random.default_rng(3)
