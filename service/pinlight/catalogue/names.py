@@ -3,7 +3,7 @@
 import re
 import unicodedata
 
-__all__ = ["name_key", "short_keys"]
+__all__ = ["key_beginnings", "name_key", "short_keys"]
 
 _GREEK = {
     "alpha": "alp", "beta": "bet", "gamma": "gam", "delta": "del", "epsilon": "eps", "zeta": "zet",
@@ -80,3 +80,19 @@ def short_keys(name: str) -> list[str]:
     elif match := _NUMBERED.fullmatch(key):
         keys = [match[1] + match[2]]
     return [short for short in dict.fromkeys(keys) if short != key]
+
+
+def key_beginnings(written: str) -> list[str]:
+    """What the keys of names begin with that a person may be about to write.
+
+    >>> key_beginnings("alpha c"), key_beginnings("Alph"), key_beginnings("hd 107")
+    (['alphac', 'alpc'], ['alph', 'alp'], ['hd107'])
+    """
+    key = name_key(written)
+    beginnings = [key]
+    for full, short in _GREEK.items():
+        if key.startswith(full):
+            beginnings.append(short + key.removeprefix(full))
+        elif len(key) >= 3 and full.startswith(key):
+            beginnings.append(short)
+    return [begin for begin in dict.fromkeys(beginnings) if begin]

@@ -9,7 +9,7 @@ from functools import cached_property
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import Connection, Engine, func, insert, select
+from sqlalchemy import Connection, Engine, func, insert, or_, select
 
 from pinlight.catalogue.database import (
     Place,
@@ -23,7 +23,7 @@ from pinlight.catalogue.database import (
     writing,
 )
 from pinlight.catalogue.editions import open_edition, record_edition
-from pinlight.catalogue.names import name_key
+from pinlight.catalogue.names import key_beginnings, name_key
 from pinlight.catalogue.tables import (
     SCHEMA,
     Companion,
@@ -168,6 +168,28 @@ class Catalogue:
         near = self._near_misses(key)
         hint = f"did you mean {' or '.join(near)}?" if near else "give its coordinates instead"
         raise NotFoundError(f"no star is named {written!r}; {hint}")
+
+    def suggest(self, written: str, most: int = 8) -> list[dict[str, Any]]:
+        """Names that begin as `written` does, the shortest first: name, the star's own name and type."""
+        usable = written.isprintable() and len(written) <= _LONGEST_NAME
+        beginnings = key_beginnings(written) if usable else []
+        if not beginnings:
+            return []
+        key = Identifier.key.collate("C" if self._engine.dialect.name == "postgresql" else "BINARY")
+        begins = [key.between(begin, f"{begin}\U0010ffff") for begin in beginnings]
+        query = (
+            select(Identifier.name, Star.name.label("star"), Star.id, Star.spectral_type)
+            .join(Star, Identifier.star_id == Star.id)
+            .where(or_(*begins), ~Identifier.short)
+            .order_by(func.length(key), key)
+            .limit(most)
+        )
+        with self.reading() as connection:
+            rows = connection.execute(query).all()
+        return [
+            {"name": row.name, "star_id": row.id, "star": row.star, "spectral_type": row.spectral_type}
+            for row in rows
+        ]
 
     def _bearers(self, key: str) -> Sequence[Any]:
         query = (

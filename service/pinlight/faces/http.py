@@ -6,13 +6,15 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-from flask import Blueprint, Flask, Response, current_app, json, render_template, request
+from flask import Blueprint, Flask, Response, current_app, json, request
 from werkzeug.exceptions import HTTPException, NotFound
 
 from pinlight.arrays.geometry import baselines
 from pinlight.catalogue.store import Catalogue
 from pinlight.errors import CatalogueError, InputError, NotFoundError, PinlightError
+from pinlight.faces.frame import page_policy, prepare_templates, render_page
 from pinlight.faces.models import PlanQuestion, RankingQuestion, StarsQuestion
+from pinlight.faces.night import night
 from pinlight.faces.openapi import describe_api
 from pinlight.faces.page import page
 from pinlight.faces.service import (
@@ -33,11 +35,6 @@ __all__ = ["create_app"]
 
 STATUS = {InputError: 400, NotFoundError: 404, CatalogueError: 503}
 _LARGEST_BODY = 1_000_000
-_POLICY = (
-    "default-src 'none'; style-src 'self'; img-src 'self'; form-action 'self'; base-uri 'none'; "
-    "frame-ancestors 'none'"
-)
-
 api = Blueprint("api", __name__, url_prefix="/api/v1")
 
 
@@ -55,9 +52,11 @@ def create_app(catalogue: Catalogue, arrays_folder: Path | None = None) -> Flask
     arrays = known_arrays(arrays_folder)
     if not arrays:
         raise InputError(f"arrays is {arrays_folder}, a folder without .toml files")
-    app.extensions["pinlight"] = Service(catalogue, arrays)
+    app.extensions["pinlight"] = Service(catalogue, arrays, arrays_folder)
     app.register_blueprint(api)
     app.register_blueprint(page)
+    app.register_blueprint(night)
+    prepare_templates(app)
     app.register_error_handler(PinlightError, _library_problem)
     app.register_error_handler(HTTPException, _http_problem)
     app.register_error_handler(Exception, _unforeseen_problem)
@@ -68,7 +67,7 @@ def create_app(catalogue: Catalogue, arrays_folder: Path | None = None) -> Flask
 def _problem(status: int, title: str, detail: str) -> Response:
     """Problem details, RFC 9457; the page gets its own view of them."""
     if not request.path.startswith("/api/"):
-        page_text = render_template("problem.html", title=title, detail=detail)
+        page_text = render_page("problem.html", title=f"{title} · Pinlight", heading=title, detail=detail)
         return Response(page_text, status, content_type="text/html; charset=utf-8")
     body = {"type": "about:blank", "title": title, "status": status, "detail": detail}
     return Response(json.dumps(body), status, content_type="application/problem+json")
@@ -92,7 +91,7 @@ def _unforeseen_problem(error: Exception) -> Response:
 
 
 def _headers(response: Response) -> Response:
-    response.headers.setdefault("Content-Security-Policy", _POLICY)
+    response.headers.setdefault("Content-Security-Policy", page_policy())
     response.headers.setdefault("X-Content-Type-Options", "nosniff")
     response.headers.setdefault("Referrer-Policy", "no-referrer")
     return response

@@ -38,6 +38,7 @@ class _KnownOfTarget(_Question):
     name: Annotated[str, Field(max_length=200)] = ""
     magnitudes: dict[str, float] = Field(default_factory=dict)
     diameter_mas: float | None = None
+    diameter_error_mas: float | None = None
 
 
 class TargetQuestion(_KnownOfTarget):
@@ -178,6 +179,7 @@ class TargetAnswer(_Answer):
     magnitude: float | None
     magnitudes: dict[str, float]
     diameter_mas: float | None
+    diameter_error_mas: float | None
     star_id: int | None
 
 

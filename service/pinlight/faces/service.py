@@ -1,6 +1,7 @@
 """What the HTTP interface and the page share: the service they ask, and how questions are read."""
 
 import json
+from pathlib import Path
 from typing import Any, NamedTuple, TypeVar
 
 from flask import current_app, request
@@ -38,6 +39,7 @@ class Service(NamedTuple):
 
     catalogue: Catalogue
     arrays: dict[str, Array]
+    arrays_folder: Path | None
 
 
 def service() -> Service:
@@ -81,10 +83,7 @@ def answer_plan(question: PlanQuestion) -> NightPlan:
     known = service()
     requests = []
     for one in question.targets:
-        target = placed_target(
-            known.catalogue,
-            **one.model_dump(include={"ra_deg", "dec_deg", "name", "magnitudes", "diameter_mas"}),
-        )
+        target = placed_target(known.catalogue, **one.model_dump(include=set(TargetQuestion.model_fields)))
         required = one.required_error_percent
         requests.append(
             Request(

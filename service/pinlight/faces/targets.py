@@ -1,6 +1,7 @@
 """Targets from what people write: names, coordinates, CSV files."""
 
 import csv
+from collections.abc import Iterable
 from dataclasses import replace
 from difflib import get_close_matches
 from pathlib import Path
@@ -14,12 +15,15 @@ from pinlight.ranking.target import Target
 from pinlight.sky.positions import looks_like_coordinates, parse_coordinates
 from pinlight.sky.time import parse_utc
 
-__all__ = ["placed_target", "read_requests", "read_targets", "resolve_target"]
+__all__ = ["placed_target", "read_requests", "read_targets", "requests_from_text", "resolve_target"]
 
 _TARGET_COLUMNS = (
     "name", "ra_deg", "dec_deg", "diameter_mas", *BANDS, "priority", "repeats", "required_error_percent",
     "from", "to",
 )  # fmt: skip
+
+
+_MOST_TARGETS = 200
 
 
 def resolve_target(catalogue: Catalogue | None, target: str | Target) -> Target:
@@ -46,6 +50,7 @@ def resolve_target(catalogue: Catalogue | None, target: str | Target) -> Target:
         diameter_mas=star["diameter"]["limb_darkened_mas"] if star["diameter"] else None,
         star_id=star["star_id"],
         motion=_motion(star),
+        diameter_error_mas=star["diameter"]["error_mas"] if star["diameter"] else None,
     )
 
 
@@ -56,6 +61,7 @@ def placed_target(
     dec_deg: float | None,
     magnitudes: dict[str, float],
     diameter_mas: float | None,
+    diameter_error_mas: float | None = None,
 ) -> Target:
     """A target at a place, or without one the star that the catalogue knows by its name.
 
@@ -67,15 +73,15 @@ def placed_target(
         If one coordinate is missing, or the name is unknown.
     """
     if ra_deg is not None and dec_deg is not None:
-        return Target(ra_deg, dec_deg, name=name, magnitudes=magnitudes, diameter_mas=diameter_mas)
+        return Target(ra_deg, dec_deg, name, magnitudes, diameter_mas, diameter_error_mas=diameter_error_mas)
     if ra_deg is not None or dec_deg is not None:
         raise InputError(f"{'dec_deg' if dec_deg is None else 'ra_deg'} of {name or 'a target'} is missing")
     if not name.strip():
         raise InputError("name is missing; a target needs ra_deg and dec_deg, or a name the catalogue knows")
     known = resolve_target(catalogue, name)
-    return replace(
-        known, magnitudes={**known.magnitudes, **magnitudes}, diameter_mas=diameter_mas or known.diameter_mas
-    )
+    if diameter_mas is not None:
+        known = replace(known, diameter_mas=diameter_mas, diameter_error_mas=diameter_error_mas)
+    return replace(known, magnitudes={**known.magnitudes, **magnitudes})
 
 
 def _motion(star: dict[str, Any]) -> tuple[float, float, float, float]:
@@ -112,28 +118,57 @@ def read_requests(path: Path, catalogue: Catalogue | None = None) -> list[Reques
     InputError
         If the file cannot be read or a row is wrong; the message names the line.
     """
-    requests = []
     try:
         with path.open(encoding="utf-8-sig", newline="") as file:
-            reader = csv.reader(file)
-            columns = _targets_columns(path, next(reader, []))
-            for cells in reader:
-                if not any(cell.strip() for cell in cells):
-                    continue
-                row = {column: cell.strip() for column, cell in zip(columns, cells, strict=False)}
-                try:
-                    requests.append(_request(row, catalogue))
-                except (InputError, NotFoundError) as error:
-                    raise InputError(f"{path} line {reader.line_num}: {error}") from error
+            return _requests_of_csv(path, file, catalogue)
     except (OSError, UnicodeDecodeError, csv.Error) as error:
         reason = error.strerror if isinstance(error, OSError) else error
         raise InputError(f"cannot read targets file {path}: {reason}") from error
+
+
+def _requests_of_csv(path: Path | str, lines: Iterable[str], catalogue: Catalogue | None) -> list[Request]:
+    requests = []
+    reader = csv.reader(lines)
+    columns = _targets_columns(path, next(reader, []))
+    for cells in reader:
+        if not any(cell.strip() for cell in cells):
+            continue
+        row = {column: cell.strip() for column, cell in zip(columns, cells, strict=False)}
+        try:
+            requests.append(_request(row, catalogue))
+        except (InputError, NotFoundError) as error:
+            raise InputError(f"{path} line {reader.line_num}: {error}") from error
     if not requests:
         raise InputError(f"targets file {path} has no rows; it needs a column name, and ra_deg, dec_deg")
     return requests
 
 
-def _targets_columns(path: Path, header: list[str]) -> list[str]:
+def requests_from_text(text: str, catalogue: Catalogue) -> list[Request]:
+    """What a plan wants, from a text: a target a line by name or coordinates, or a targets file's content.
+
+    Raises
+    ------
+    InputError, NotFoundError
+        If a line is neither; the message names it.
+    """
+    lines = text.splitlines()
+    if "name" in [cell.strip().casefold() for cell in (lines[0] if lines else "").split(",")]:
+        return _requests_of_csv("of the form", lines, catalogue)
+    requests = []
+    for number, line in enumerate(lines, start=1):
+        if line.strip():
+            try:
+                requests.append(Request(resolve_target(catalogue, line)))
+            except (InputError, NotFoundError) as error:
+                raise type(error)(f"line {number}: {error}") from error
+    if not requests:
+        raise InputError("targets is empty; write a target a line")
+    if len(requests) > _MOST_TARGETS:
+        raise InputError(f"targets has {len(requests)} lines; {_MOST_TARGETS} are the most")
+    return requests
+
+
+def _targets_columns(path: Path | str, header: list[str]) -> list[str]:
     """The columns of a targets file, as this project spells them, whatever their case."""
     spelled = {name.casefold(): name for name in _TARGET_COLUMNS}
     columns = [spelled.get(cell.strip().casefold(), cell.strip()) for cell in header]

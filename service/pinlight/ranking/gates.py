@@ -60,7 +60,7 @@ def close_gates(
     setup: Setup,
     limits: Thresholds,
     barred: frozenset[int],
-) -> tuple[NDArray[np.int64], NDArray[np.float64], dict[str, int]]:
+) -> tuple[NDArray[np.int64], NDArray[np.float64], dict[str, NDArray[np.int64]]]:
     """Which stars of a cone pass every gate but that of V^2.
 
     Parameters
@@ -76,14 +76,14 @@ def close_gates(
     rows, separations_deg : array, shape (N,)
         Those that pass.
     excluded : dict
-        Reason -> number of stars of the cone.
+        Reason -> rows of the cone that fail there.
     """
-    excluded: dict[str, int] = {}
+    excluded: dict[str, NDArray[np.int64]] = {}
 
     def close(reason: str, failing: NDArray[np.bool_]) -> None:
         nonlocal rows, separations_deg
         if failing.any():
-            excluded[reason] = int(failing.sum())
+            excluded[reason] = rows[failing]
             rows, separations_deg = rows[~failing], separations_deg[~failing]
 
     same = separations_deg <= _SAME_STAR_DEG

@@ -15,7 +15,7 @@ from pinlight.ranking.clock import Clock
 from pinlight.ranking.columns import StarColumns, flag_words
 from pinlight.ranking.gates import REASONS, close_gates
 from pinlight.ranking.reach import StarsReach, TargetReach, reach_of_target
-from pinlight.ranking.result import Calibrator, CalibratorSet, Ranking
+from pinlight.ranking.result import Calibrator, CalibratorSet, LeftOut, Ranking
 from pinlight.ranking.sets import best_subsets, field_covariance, subset_variances
 from pinlight.ranking.setup import Setup, Thresholds
 from pinlight.ranking.target import Target
@@ -28,13 +28,15 @@ __all__ = ["rank"]
 # Sets are looked for among this many of the best stars.
 SET_CANDIDATES = 40
 _CHUNK = 64
+# Stars named for each reason to leave stars out.
+_MOST_LEFT_OUT = 40
 
 
 @dataclass(frozen=True)
 class _Ranked:
     """The best of the stars that passed every gate; arrays of shape (N,) unless said.
 
-    `count` is how many passed, the best or not.
+    `count` is how many passed, the best or not; `excluded` has the rows that failed, by reason.
     """
 
     rows: NDArray[np.int64]
@@ -43,7 +45,7 @@ class _Ranked:
     longest_m: NDArray[np.float64]
     reach: StarsReach | None
     count: int
-    excluded: dict[str, int]
+    excluded: dict[str, NDArray[np.int64]]
 
 
 def rank(
@@ -105,7 +107,7 @@ def rank(
 
     rows, separations = stars.cone(target.ra_deg, target.dec_deg, limits.separation_max_deg)
     ranked = assess(rows, separations)
-    excluded = dict(ranked.excluded)
+    excluded = {reason: len(failing) for reason, failing in ranked.excluded.items()}
     if too_far := len(stars) - len(rows):
         excluded["too_far"] = too_far
     windows = _windows(stars, ranked, reach, best)
@@ -135,6 +137,7 @@ def rank(
         target_windows=None if reach is None else tuple(reach.target_windows),
         coarse_paths_m=_coarse_paths(reach),
         names=_names(stars, [*sets, *([named] if named else [])]),
+        left_out=_left_out(stars, target, ranked.excluded),
         notes=tuple(_notes(setup, limits, target, reach)),
     )
 
@@ -159,7 +162,7 @@ def _assess(
         in_reach = np.asarray(together.times.any(axis=1))
         for reason, failing in (("not_up", ~together.up), ("out_of_reach", together.up & ~in_reach)):
             if failing.any():
-                excluded[reason] = int(failing.sum())
+                excluded[reason] = rows[failing]
         rows, separations = rows[in_reach], separations[in_reach]
         together = together.only(in_reach)
         lengths_m = together.baselines_m
@@ -169,7 +172,8 @@ def _assess(
     magnitude = target.magnitudes.get(setup.band)
     fixed = fixed_terms(stars, rows, separations, setup, magnitude)
     order, budget, resolved = _in_order(stars, rows, setup, fixed, judge, lengths_m, limits.v2_min, most)
-    count = len(rows) - resolved
+    count = len(rows) - len(resolved)
+    too_large = rows[resolved]
     if reach is not None:
         # Of the best, the one coarse setting that serves star and target for longest, and its baselines.
         rows, separations = rows[order], separations[order]
@@ -177,9 +181,9 @@ def _assess(
         lengths_m, longest = together.baselines_m, together.baselines_m.max(axis=1)
         fixed = fixed_terms(stars, rows, separations, setup, magnitude)
         order, budget, more = _in_order(stars, rows, setup, fixed, judge, lengths_m, limits.v2_min, most)
-        count, resolved = count - more, resolved + more
-    if resolved:
-        excluded["resolved"] = resolved
+        count, too_large = count - len(more), np.append(too_large, rows[more])
+    if len(too_large):
+        excluded["resolved"] = too_large
     return _Ranked(
         rows=rows[order],
         separations=separations[order],
@@ -200,15 +204,16 @@ def _in_order(
     lengths_m: NDArray[np.float64],
     v2_min: float,
     most: int,
-) -> tuple[NDArray[np.int64], Budget, int]:
-    """The best `most` of some stars, their budget, and how many of all fall below the floor of V^2.
+) -> tuple[NDArray[np.int64], Budget, NDArray[np.int64]]:
+    """The best `most` of some stars, their budget, and those of all that fall below the floor of V^2.
 
     The fixed terms alone bound a star's error from below. Stars are worked out in the order of that
     bound, and the work ends when the next bound exceeds the worst of the best `most`.
     """
     # Past its first null a star is no calibrator: there V^2 does not follow its diameter's error.
     floor = max(v2_min, SECOND_LOBE_V2)
-    passing = np.flatnonzero(lowest_v2(stars, rows, setup, lengths_m.max(axis=1)) >= floor)
+    passes = lowest_v2(stars, rows, setup, lengths_m.max(axis=1)) >= floor
+    passing = np.flatnonzero(passes)
     bound = np.sqrt(np.sum([term**2 for term in fixed.values() if term is not None], axis=0))
     queue = passing[np.argsort(bound[passing], kind="stable")]
     done = np.empty(0, dtype=np.int64)
@@ -223,7 +228,22 @@ def _in_order(
         done = np.append(done, chunk)
         totals = np.append(totals, parts[-1].total)
     best = np.lexsort([stars.ids[rows[done]], totals])[:most]
-    return done[best], Budget.joined(parts).only(best), len(rows) - len(passing)
+    return done[best], Budget.joined(parts).only(best), np.flatnonzero(~passes)
+
+
+def _left_out(
+    stars: StarColumns, target: Target, excluded: dict[str, NDArray[np.int64]]
+) -> dict[str, tuple[LeftOut, ...]]:
+    """The stars nearest to the target that failed each gate, nearest first."""
+    shown = {}
+    for reason, rows in excluded.items():
+        apart = separation_deg(target.ra_deg, target.dec_deg, stars.ra_deg[rows], stars.dec_deg[rows])
+        nearest = np.argsort(apart, kind="stable")[:_MOST_LEFT_OUT]
+        shown[reason] = tuple(
+            LeftOut(int(stars.ids[row]), stars.names[row].decode(), float(separation))
+            for row, separation in zip(rows[nearest], apart[nearest], strict=True)
+        )
+    return shown
 
 
 def _windows(

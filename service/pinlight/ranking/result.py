@@ -1,5 +1,6 @@
 """The one result object behind every face."""
 
+import itertools
 import math
 from collections.abc import Iterable
 from dataclasses import dataclass
@@ -13,8 +14,13 @@ from pinlight.sky.windows import Window
 
 if TYPE_CHECKING:
     from astropy.table import QTable
+    from bokeh.models import UIElement
 
-__all__ = ["Calibrator", "CalibratorSet", "Ranking", "windows_json"]
+__all__ = ["Calibrator", "CalibratorSet", "LeftOut", "Ranking", "windows_json"]
+
+
+# One more calibrator pays while it lowers the set's error by this part of it.
+_WORTH_IT = 0.05
 
 
 def _rounded(value: float | None, digits: int) -> float | None:
@@ -109,6 +115,15 @@ class Calibrator:
 
 
 @dataclass(frozen=True)
+class LeftOut:
+    """A star that failed a gate, and how far from the target it is."""
+
+    star_id: int
+    name: str
+    separation_deg: float
+
+
+@dataclass(frozen=True)
 class Ranking:
     """The calibrators of one target, best first, and why all other stars are not among them.
 
@@ -117,7 +132,8 @@ class Ranking:
     the best set of each size from 1, with a clock only of stars that are in reach at one time under
     one coarse setting; `named_set` is one that the caller asked for. With a clock,
     `span` is the time looked at, `target_windows` are the target's, and `coarse_paths_m` the
-    coarse delay settings that give it its longest one. `names` are the names of the stars in sets.
+    coarse delay settings that give it its longest one. `names` are the names of the stars in sets;
+    `left_out` names the nearest of the excluded stars by reason, those too far from the target not among them.
     """
 
     edition: str
@@ -137,7 +153,16 @@ class Ranking:
     target_windows: tuple[Window, ...] | None
     coarse_paths_m: dict[str, float] | None
     names: dict[int, str]
+    left_out: dict[str, tuple[LeftOut, ...]]
     notes: tuple[str, ...]
+
+    @property
+    def paying_set(self) -> CalibratorSet | None:
+        """The smallest best set whose error one more star would lower by less than 5 % of it."""
+        for one, larger in itertools.pairwise(self.best_sets):
+            if larger.calibration_error > (1 - _WORTH_IT) * one.calibration_error:
+                return one
+        return self.best_sets[-1] if self.best_sets else None
 
     def to_dict(self) -> dict[str, Any]:
         """The JSON of a ranking, as described in the project's interface."""
@@ -201,3 +226,14 @@ class Ranking:
                 "notes": list(self.notes),
             },
         )
+
+    def figure(self) -> "UIElement":
+        """Sky, V^2 against baseline, sets and the night's windows as one Bokeh layout."""
+        from pinlight.ranking.figure import draw
+
+        return draw(self)
+
+    def _repr_html_(self) -> str:
+        from pinlight.ranking.html import ranking_html
+
+        return ranking_html(self)

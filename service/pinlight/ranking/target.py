@@ -18,7 +18,8 @@ class Target:
 
     `star_id` is set when the target is a star of the catalogue, which then is no calibrator of
     itself. `motion` is its proper motion in RA (with cos dec) and Dec in mas/yr, parallax in mas and
-    radial velocity in km/s. `magnitudes` maps bands to magnitudes; a band that is missing leaves terms out.
+    radial velocity in km/s. `magnitudes` maps bands to magnitudes; a band that is missing leaves terms
+    out. `diameter_error_mas` is None where it is not known.
 
     Raises
     ------
@@ -34,6 +35,7 @@ class Target:
     diameter_mas: float | None = None
     star_id: int | None = None
     motion: tuple[float, float, float, float] | None = None
+    diameter_error_mas: float | None = None
 
     def __post_init__(self) -> None:
         check_position(self.ra_deg, self.dec_deg)
@@ -44,6 +46,9 @@ class Target:
             )
         if self.diameter_mas is not None and not 0 < self.diameter_mas < 1e4:
             raise InputError(f"diameter_mas is {self.diameter_mas:g}; it must be positive and below 10000")
+        if self.diameter_error_mas is not None and not 0 <= self.diameter_error_mas < 1e4:
+            error = self.diameter_error_mas
+            raise InputError(f"diameter_error_mas is {error:g}; it must lie between 0 and 10000")
         for band, value in self.magnitudes.items():
             check_magnitude(band, value)
 
@@ -56,5 +61,6 @@ class Target:
             "magnitude": self.magnitudes.get(band),
             "magnitudes": dict(self.magnitudes),
             "diameter_mas": self.diameter_mas,
+            "diameter_error_mas": self.diameter_error_mas,
             "star_id": self.star_id,
         }
