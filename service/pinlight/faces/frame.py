@@ -58,8 +58,21 @@ def prepare_templates(app: Flask) -> None:
         "thousands": lambda number: f"{number:,}".replace(",", "\N{NARROW NO-BREAK SPACE}"),
         "words": lambda text: text.replace("_", " "),
         "strip": budget_strip,
+        "kind": _kind,
     }
     app.jinja_env.trim_blocks = app.jinja_env.lstrip_blocks = True
+
+
+def _kind(schema: dict[str, Any]) -> str:
+    """What a field of the API may hold, in words."""
+    options = schema.get("anyOf") or schema.get("oneOf") or [schema]
+    kinds = []
+    for option in options:
+        if option.get("type") == "array":
+            kinds.append(f"list of {_kind(option['items'])}")
+        elif option.get("type") != "null":
+            kinds.append(option.get("$ref", "").split("/")[-1] or option.get("type", "anything"))
+    return " or ".join(dict.fromkeys(kinds))
 
 
 def address_question(values: MultiDict[str, str]) -> dict[str, str]:

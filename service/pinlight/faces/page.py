@@ -89,12 +89,13 @@ def _ranking_view() -> tuple[dict[str, Any], int]:
 
 def _elsewhere(asked: dict[str, str]) -> dict[str, str]:
     """The same question as a command, as Python, and over HTTP."""
-    question = dict(asked)
+    fields = RankingQuestion.model_fields
+    order = [field.alias or name for name, field in fields.items()]
+    question = dict(sorted(asked.items(), key=lambda item: order.index(item[0])))
     if service().arrays_folder and "array" in question:
         question["array"] = f"{question['array']}.toml"
     target = question.pop("target")
     options = " ".join(f"--{key.replace('_', '-')} {shlex.quote(value)}" for key, value in question.items())
-    fields = RankingQuestion.model_fields
     numbers = {
         name for name, field in fields.items() if "float" in str(field.annotation) or field.annotation is int
     }
