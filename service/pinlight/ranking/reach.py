@@ -17,8 +17,9 @@ Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 Ints = NDArray[np.int64]
 
-# Parts of a star's time in reach at which its baselines are taken.
-_MOMENTS = (0.2, 0.8)
+# Parts of a star's time in reach at which its baselines are taken: to find the best, and of the best.
+_FEW_MOMENTS = (0.2, 0.8)
+_MOMENTS = (0.0, 0.25, 0.5, 0.75, 1.0)
 _LONG = 36  # times; three hours
 _CHUNK = 64  # stars whose longest stretches are sought at a time
 
@@ -73,7 +74,8 @@ class TargetReach:
         theirs, its = delays[:, star, when], self.delays_m[:, ::every][:, when]
         times = np.zeros_like(observable)
         times[star, when] = lines.settings_for(np.minimum(theirs, its), np.maximum(theirs, its))[1]
-        return StarsReach(np.asarray(observable.any(axis=1)), times, self._baselines_m(times, delays))
+        baselines_m = self._baselines_m(times, delays, _FEW_MOMENTS)
+        return StarsReach(np.asarray(observable.any(axis=1)), times, baselines_m)
 
     def longest(self, columns: StarColumns, rows: Ints) -> StarsReach:
         """The same under those settings, a star, that keep it and the target in reach for longest."""
@@ -86,7 +88,8 @@ class TargetReach:
         settings = np.concatenate(found)
         each = settings.T[:, :, None]
         times = observable & lines.with_settings(each, low) & lines.with_settings(each, high)
-        return StarsReach(np.asarray(observable.any(axis=1)), times, self._baselines_m(times, delays), settings)
+        baselines_m = self._baselines_m(times, delays, _MOMENTS)
+        return StarsReach(np.asarray(observable.any(axis=1)), times, baselines_m, settings)
 
     def ever_together(self, columns: StarColumns, rows: Ints, sets: Ints) -> Bools:
         """Whether some sets of stars share a moment and a coarse setting, with the target too.
@@ -119,12 +122,10 @@ class TargetReach:
         observable = self.clock.observable(ra, dec, times) & self.observable[::every]
         return observable, self.clock.delays_m(ra, dec, times)
 
-    def _baselines_m(self, times: Bools, delays_m: Floats) -> Floats:
+    def _baselines_m(self, times: Bools, delays_m: Floats, parts: tuple[float, ...]) -> Floats:
         """Projected lengths of all pairs at the moments of each star's times, shape (N, M)."""
         counts = times.cumsum(axis=1)
-        moments = [
-            (counts >= np.maximum(1, np.ceil(part * counts[:, -1:]))).argmax(axis=1) for part in _MOMENTS
-        ]
+        moments = [(counts >= np.maximum(1, np.ceil(part * counts[:, -1:]))).argmax(axis=1) for part in parts]
         if times.shape[1] == 1:
             moments = moments[:1]
         delays_then = delays_m[:, np.arange(len(times))[:, None], np.stack(moments, axis=1)]
