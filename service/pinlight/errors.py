@@ -1,6 +1,14 @@
 """Every exception that Pinlight raises on purpose."""
 
-__all__ = ["CatalogueError", "InputError", "NotFoundError", "PinlightError", "SeedFileError"]
+__all__ = [
+    "CatalogueError",
+    "InputError",
+    "NotAllowedError",
+    "NotFoundError",
+    "PinlightError",
+    "SeedFileError",
+    "TokenError",
+]
 
 
 class PinlightError(Exception):
@@ -13,6 +21,14 @@ class InputError(PinlightError, ValueError):
 
 class NotFoundError(PinlightError, LookupError):
     """No star, array, mode or edition by that name."""
+
+
+class TokenError(PinlightError):
+    """A member's token is needed and there is none, or it is unknown or revoked."""
+
+
+class NotAllowedError(PinlightError):
+    """The member's role does not suffice."""
 
 
 class CatalogueError(PinlightError):

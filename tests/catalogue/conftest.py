@@ -13,7 +13,7 @@ def catalogue(request: pytest.FixtureRequest, seeded_path: object) -> Iterator[C
         opened = open_catalogue(str(seeded_path))
     else:
         server, name = (request.getfixturevalue(name) for name in ("server", "seeded_database"))
-        opened = open_catalogue(server.url(name))
+        opened = open_catalogue(server.new_database(name))  # a template may have no other connections
         opened.editions_folder = seeded_path.with_name(f"{seeded_path.name}.editions")
     yield opened
     opened.close()

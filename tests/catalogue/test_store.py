@@ -98,29 +98,6 @@ def test_the_same_content_has_the_same_edition_on_either_database(catalogue, emp
     again.close()
 
 
-def test_standings_are_added_and_the_newest_counts(tmp_path, seeded_path):
-    copy = tmp_path / "copy.db"
-    copy.write_bytes(seeded_path.read_bytes())
-    catalogue = open_catalogue(str(copy))
-    star_id = catalogue.find("HD 10700")
-    assert catalogue.standings() == {}
-    catalogue.set_standing(star_id, "doubted", "looked double in one night", "Ada")
-    catalogue.set_standing(star_id, "barred", "a companion at 40 mas", "Bo")
-    assert catalogue.standings() == {star_id: "barred"}
-    record = catalogue.star(star_id)
-    assert record["standing"] == "barred"
-    assert [entry["standing"] for entry in record["standings"]] == ["doubted", "barred"]
-    for standing, reason, message in (
-        ("good", "x", "standing is 'good'; it may be one of vouched"),
-        ("barred", " ", "reason is empty"),
-    ):
-        with pytest.raises(InputError, match=message):
-            catalogue.set_standing(star_id, standing, reason, "Ada")
-    with pytest.raises(NotFoundError, match="star_id is 10000000; there is no such star"):
-        catalogue.set_standing(10_000_000, "barred", "x", "Ada")
-    catalogue.close()
-
-
 def test_an_unknown_edition_lists_the_known_ones(catalogue):
     known = catalogue.editions()[0]["name"]
     with pytest.raises(NotFoundError, match=f"edition is 'abc'; the catalogue has {known}"):
@@ -248,7 +225,7 @@ def test_a_reader_on_read_only_ground_sees_what_a_writer_just_wrote(tmp_path, se
     copy = tmp_path / "p.db"
     copy.write_bytes(seeded_path.read_bytes())
     writer = open_catalogue(str(copy))
-    writer.set_standing(1, "barred", "seen double", "Ada")
+    writer.set_standing(1, "barred", "seen double")
     for parent in (tmp_path, *tmp_path.parents[:3]):
         if str(parent) != "/tmp":
             parent.chmod(0o755)
@@ -344,7 +321,7 @@ def test_a_read_only_folder_is_named_and_a_catalogue_in_it_still_ranks(tmp_path,
         with pytest.raises(
             CatalogueError, match=r"cannot write to catalogue .*readonly database; nothing was changed"
         ):
-            catalogue.set_standing(1, "barred", "x", "Ada")
+            catalogue.set_standing(1, "barred", "x")
         catalogue.close()
     finally:
         if was_root:

@@ -276,7 +276,7 @@ def test_the_openapi_description_covers_every_route(client):
     assert described["openapi"].startswith("3.1")
     app = client.application
     routes = {
-        (rule.rule.replace("<int:", "{").replace(">", "}"), method.lower())
+        (rule.rule.replace("<int:", "{").replace("<", "{").replace(">", "}"), method.lower())
         for rule in app.url_map.iter_rules()
         for method in rule.methods - {"HEAD", "OPTIONS"}
         if rule.rule.startswith("/api/") and not rule.rule.endswith("openapi.json")

@@ -27,6 +27,7 @@ __all__ = [
     "reading",
     "refuse_newer",
     "schema_of",
+    "set_counters",
     "snapshot",
     "writing",
 ]
@@ -203,6 +204,17 @@ def schema_of(connection: Connection) -> str | None:
         return None
     revision = connection.execute(text("SELECT version_num FROM alembic_version")).scalar()
     return str(revision) if revision else None
+
+
+def set_counters(connection: Connection) -> None:
+    """Let a server's counters go on after the highest id, where rows were written with theirs."""
+    if connection.dialect.name != "postgresql":
+        return
+    for name in inspect(connection).get_table_names():
+        sequence = f"pg_get_serial_sequence('{name}', 'id')"
+        if any(column["name"] == "id" for column in inspect(connection).get_columns(name)):
+            top = f"(SELECT max(id) FROM {name})"
+            connection.execute(text(f"SELECT setval({sequence}, {top}) WHERE {top} IS NOT NULL"))
 
 
 def refuse_newer(schema: str, place: Place) -> None:

@@ -5,7 +5,6 @@ import json
 import os
 import shutil
 import tempfile
-from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
@@ -13,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 from sqlalchemy import Connection, insert, select
 
+from pinlight.catalogue.changes import Changing
 from pinlight.catalogue.tables import Companion, Diameter, Edition, Magnitude, Star
 from pinlight.diameters.limb_darkening import coefficients
 from pinlight.diameters.oblateness import oblateness_bound
@@ -21,7 +21,7 @@ from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.ranking.columns import StarColumns, flag_bits
 from pinlight.sky.cells import CELL_COUNT, cell_centres
 
-__all__ = ["open_edition", "record_edition", "write_edition"]
+__all__ = ["MANIFEST", "content_hash", "open_edition", "record_edition", "write_edition"]
 
 MANIFEST = "manifest.json"
 _FORMAT = 1
@@ -114,7 +114,8 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
     return columns, {"relations": relation_names, "relation_sets": relation_sets, "stars": count}
 
 
-def _content_hash(columns: dict[str, NDArray[Any]], facts: dict[str, Any]) -> str:
+def content_hash(columns: dict[str, NDArray[Any]], facts: dict[str, Any]) -> str:
+    """The hash of an edition: of all its arrays, and of what its manifest says of relations and stars."""
     digest = hashlib.sha256(json.dumps([_FORMAT, facts], sort_keys=True).encode())
     for name in sorted(columns):
         column = np.ascontiguousarray(columns[name])
@@ -150,7 +151,7 @@ def write_edition(connection: Connection, folder: Path) -> tuple[str, dict[str, 
         If the folder cannot be written.
     """
     columns, facts = _read_columns(connection)
-    full_hash = _content_hash(columns, facts)
+    full_hash = content_hash(columns, facts)
     name = full_hash[:12]
     manifest = {"format": _FORMAT, "name": name, "hash": full_hash, **facts}
     final = folder / name
@@ -179,16 +180,17 @@ def write_edition(connection: Connection, folder: Path) -> tuple[str, dict[str, 
     return name, manifest
 
 
-def record_edition(connection: Connection, name: str, facts: dict[str, Any]) -> None:
-    """Make an edition whose files are written known to the catalogue."""
-    if connection.execute(select(Edition.name).where(Edition.name == name)).first():
+def record_edition(change: Changing, name: str, facts: dict[str, Any], after: int) -> None:
+    """Make an edition whose files are written known to the catalogue; `after` is the change it follows."""
+    if change.connection.execute(select(Edition.name).where(Edition.name == name)).first():
         return
-    connection.execute(
+    change.connection.execute(
         insert(Edition).values(
             name=name,
-            made_utc=datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ"),
+            made_utc=change.made_utc,
             star_count=facts["stars"],
             relation_set=" ".join(facts["relation_sets"]),
+            change_id=after or change.id,
         )
     )
 

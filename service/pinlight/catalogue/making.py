@@ -7,6 +7,7 @@ from pathlib import Path
 
 from sqlalchemy import Connection, Engine, inspect
 
+from pinlight.catalogue.changes import Changing
 from pinlight.catalogue.database import (
     Place,
     database_errors,
@@ -51,7 +52,8 @@ def make_catalogue(url: str | None = None, *, seed: bool = True, progress: Progr
         if catalogue.editions():
             catalogue.columns()
     except CatalogueError:  # its files were lost or left behind; the same content makes them again
-        catalogue.freeze()
+        with catalogue.reading() as connection:
+            write_edition(connection, catalogue.editions_folder)
     return catalogue
 
 
@@ -155,7 +157,8 @@ def _fill(connection: Connection, place: Place, seed: bool, progress: Progress) 
     if seed:
         from pinlight.catalogue.seed import fill_from_seed
 
-        fill_from_seed(connection, progress)
+        change = Changing(connection, "Pinlight", "seed", {})
+        fill_from_seed(change, progress)
         progress("freezing the first edition")
         name, facts = write_edition(connection, place.editions_folder)
-        record_edition(connection, name, facts)
+        record_edition(change, name, facts, change.id)

@@ -3,15 +3,16 @@
 import gzip
 import json
 import re
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import Connection, insert
+from sqlalchemy import insert
 
+from pinlight.catalogue.changes import Changing
 from pinlight.catalogue.database import bulk_insert
 from pinlight.catalogue.names import name_key, short_keys
 from pinlight.catalogue.tables import Companion, Diameter, Identifier, Magnitude, Source, Star
@@ -159,7 +160,7 @@ def _flags(object_type: str, spectral_type: str, identifiers: list[str]) -> str:
     return " ".join(word for word in FLAGS if word in words)
 
 
-def fill_from_seed(connection: Connection, progress: Progress, path: Path | None = None) -> int:
+def fill_from_seed(change: Changing, progress: Progress, path: Path | None = None) -> int:
     """Put the seed's stars, names, magnitudes, neighbours and diameters into empty tables.
 
     Returns
@@ -175,12 +176,17 @@ def fill_from_seed(connection: Connection, progress: Progress, path: Path | None
     progress("reading the seed")
     stars = read_seed(path)
     errors = _by_band(default_errors, stars.magnitudes)
+    connection = change.connection
     connection.execute(insert(Source), [STARS_SOURCE, NAMES_SOURCE])
+
+    def write(table: type[Any], rows: Iterable[dict[str, Any]]) -> None:
+        bulk_insert(connection, table, (row | {"change_id": change.id} for row in rows))
+
     progress("writing stars and names")
-    bulk_insert(connection, Star, _star_rows(stars))
-    bulk_insert(connection, Identifier, _identifier_rows(stars))
-    bulk_insert(connection, Magnitude, _magnitude_rows(stars, errors))
-    bulk_insert(connection, Companion, _companion_rows(stars))
+    write(Star, _star_rows(stars))
+    write(Identifier, _identifier_rows(stars))
+    write(Magnitude, _magnitude_rows(stars, errors))
+    write(Companion, _companion_rows(stars))
     progress("predicting diameters")
     relation_set = load_relations()
     diameters = predict_diameters(
@@ -198,7 +204,7 @@ def fill_from_seed(connection: Connection, progress: Progress, path: Path | None
         relation_set,
     )
     progress("writing diameters")
-    bulk_insert(connection, Diameter, _diameter_rows(diameters, relation_set))
+    write(Diameter, _diameter_rows(diameters, relation_set))
     return len(stars.names)
 
 

@@ -2,15 +2,16 @@
 
 import json
 import re
-from collections.abc import Sequence
-from contextlib import AbstractContextManager
-from datetime import UTC, datetime
+from collections.abc import Iterable, Iterator, Sequence
+from contextlib import AbstractContextManager, contextmanager
+from copy import copy
 from functools import cached_property
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import Connection, Engine, func, insert, or_, select
+from sqlalchemy import Connection, Engine, func, or_, select
 
+from pinlight.catalogue.changes import Changing, latest_change, recent_changes, star_changes, star_then
 from pinlight.catalogue.database import (
     Place,
     database_errors,
@@ -23,7 +24,16 @@ from pinlight.catalogue.database import (
     writing,
 )
 from pinlight.catalogue.editions import open_edition, record_edition
+from pinlight.catalogue.members import Person, person_of
 from pinlight.catalogue.names import key_beginnings, name_key
+from pinlight.catalogue.standings import (
+    STANDINGS,
+    must_exist,
+    public_standing,
+    set_standing,
+    standing_rows,
+    standings_for,
+)
 from pinlight.catalogue.tables import (
     SCHEMA,
     Companion,
@@ -32,7 +42,6 @@ from pinlight.catalogue.tables import (
     Identifier,
     Magnitude,
     Source,
-    Standing,
     Star,
 )
 from pinlight.errors import CatalogueError, InputError, NotFoundError
@@ -40,12 +49,12 @@ from pinlight.ranking.columns import StarColumns
 
 __all__ = ["STANDINGS", "Catalogue", "open_catalogue"]
 
-STANDINGS = ("vouched", "unproven", "doubted", "barred")
 _MOST_CHOICES = 8
 _LONGEST_NAME = 200
+_MOST_IDS = 10_000
 
 
-def open_catalogue(url: str | None = None) -> "Catalogue":
+def open_catalogue(url: str | None = None, *, token: str | None = None) -> "Catalogue":
     """Open an existing catalogue.
 
     Raises
@@ -64,23 +73,27 @@ def open_catalogue(url: str | None = None) -> "Catalogue":
     engine = engine_of(place)
     try:
         with database_errors(place, "open"), engine.connect() as connection:
-            schema = schema_of(connection)
-        if schema is None:
-            raise CatalogueError(f"{place} is no Pinlight catalogue; run 'pinlight init --db URL' to make one")
-        refuse_newer(schema, place)
-        if schema < SCHEMA:
-            raise CatalogueError(f"catalogue {place} has schema {schema}; run 'pinlight init' to renew it")
+            _check_schema(schema_of(connection), place)
     except BaseException:
         engine.dispose()
         raise
-    return Catalogue(place, engine)
+    return Catalogue(place, engine, token)
+
+
+def _check_schema(schema: str | None, place: Place) -> None:
+    if schema is None:
+        raise CatalogueError(f"{place} is no Pinlight catalogue; run 'pinlight init --db URL' to make one")
+    refuse_newer(schema, place)
+    if schema < SCHEMA:
+        raise CatalogueError(f"catalogue {place} has schema {schema}; run 'pinlight init' to renew it")
 
 
 class Catalogue:
     """An open catalogue: rankings read its columns, people ask it for stars."""
 
-    def __init__(self, place: Place, engine: Engine) -> None:
+    def __init__(self, place: Place, engine: Engine, token: str | None = None) -> None:
         self.place = place
+        self.token = token
         self._engine = engine
         self._open_editions: dict[str, StarColumns] = {}
 
@@ -93,6 +106,48 @@ class Catalogue:
         """Where the edition files are."""
         return self.place.editions_folder
 
+    def acting(self, token: str | None) -> "Catalogue":
+        """The same catalogue, in the hands of whoever has that token."""
+        other = copy(self)
+        other.token = token
+        return other
+
+    def person(self) -> Person:
+        """Who acts.
+
+        Raises
+        ------
+        TokenError
+            If the token is missing, unknown or revoked.
+        """
+        with self.reading() as connection:
+            return person_of(connection, self.token)
+
+    @contextmanager
+    def changing(self, action: str, role: str, doing: str, detail: dict[str, Any]) -> Iterator[Changing]:
+        """A change by whoever acts, in a transaction of its own, if their role suffices.
+
+        Parameters
+        ----------
+        action : str
+            One word for the log.
+        role : str
+            The least that it takes.
+        doing : str
+            What the message says that it takes that role for.
+        detail : dict
+            What the log says of it.
+
+        Raises
+        ------
+        TokenError, NotAllowedError
+            If the one who acts may not.
+        """
+        with writing(self._engine, self.place) as connection:
+            person = person_of(connection, self.token)
+            person.require(role, doing)
+            yield Changing(connection, person.name, action, detail)
+
     def reading(self) -> AbstractContextManager[Connection]:
         """A connection to read by."""
         return reading(self._engine, self.place)
@@ -101,15 +156,17 @@ class Catalogue:
         """Write the present content as an edition and return its name."""
         from pinlight.catalogue.editions import write_edition
 
+        self.person().require("keeper", "freeze an edition")
         with snapshot(self._engine, self.place) as connection:
+            after = latest_change(connection)
             name, facts = write_edition(connection, self.editions_folder)
-        with writing(self._engine, self.place) as connection:
-            record_edition(connection, name, facts)
+        with self.changing("edition", "keeper", "freeze an edition", {"edition": name}) as change:
+            record_edition(change, name, facts, after)
         return name
 
     def editions(self) -> list[dict[str, Any]]:
         """All editions, newest first."""
-        query = select(Edition.name, Edition.made_utc, Edition.star_count, Edition.relation_set)
+        query = select(Edition.__table__)
         with self.reading() as connection:
             rows = connection.execute(query.order_by(Edition.made_utc.desc(), Edition.name)).mappings().all()
         return [dict(row) for row in rows]
@@ -122,15 +179,21 @@ class Catalogue:
         NotFoundError
             If there is no such edition.
         """
-        known = [row["name"] for row in self.editions()]
-        if not known:
-            raise CatalogueError(f"catalogue {self.place} has no edition yet; add stars and freeze one")
-        name = edition or known[0]
-        if name not in known:
-            raise NotFoundError(f"edition is {name!r}; the catalogue has {', '.join(known[:_MOST_CHOICES])}")
+        name = self._known_edition(edition)["name"]
         if name not in self._open_editions:
             self._open_editions[name] = open_edition(self.editions_folder, name)
         return self._open_editions[name]
+
+    def _known_edition(self, name: str | None) -> dict[str, Any]:
+        """The edition of that name, by default the newest."""
+        rows = self.editions()
+        if not rows:
+            raise CatalogueError(f"catalogue {self.place} has no edition yet; add stars and freeze one")
+        for row in rows:
+            if name in (None, row["name"]):
+                return row
+        known = ", ".join(row["name"] for row in rows[:_MOST_CHOICES])
+        raise NotFoundError(f"edition is {name!r}; the catalogue has {known}")
 
     def find(self, name: str) -> int:
         """The id of the star of that name; case, blanks, dots and ways of writing Greek do not matter.
@@ -222,36 +285,81 @@ class Catalogue:
         near = process.extract(key, self._all_names.keys(), scorer=fuzz.ratio, limit=most, score_cutoff=75)
         return [self._all_names[found] for found, _, _ in near]
 
-    def standings(self) -> dict[int, str]:
-        """The newest standing of every star that has one, by star id."""
-        newest = select(func.max(Standing.id)).group_by(Standing.star_id)
-        query = select(Standing.star_id, Standing.standing).where(Standing.id.in_(newest))
+    def standings(
+        self, band: str | None = None, mode: str | None = None, array: str | None = None
+    ) -> dict[int, str]:
+        """The standing that counts of every star that has one; see `standings.standings_for`."""
         with self.reading() as connection:
-            return {row.star_id: row.standing for row in connection.execute(query)}
+            return standings_for(standing_rows(connection), band, mode, array)
 
-    def set_standing(self, star_id: int, standing: str, reason: str, made_by: str) -> None:
-        """Add a judgement of a star; earlier ones stay on record.
+    def set_standing(self, star_id: int, standing: str, reason: str, **options: Any) -> dict[str, Any]:
+        """Add a judgement of a star; see `standings.set_standing`."""
+        return set_standing(self, star_id, standing, reason, **options)
+
+    def star_standings(self, star_id: int) -> dict[str, Any]:
+        """All judgements of a star, oldest first, and the general one that counts.
 
         Raises
         ------
-        InputError
-            If the standing is unknown or the reason empty.
         NotFoundError
             If there is no such star.
         """
-        if standing not in STANDINGS:
-            raise InputError(f"standing is {standing!r}; it may be one of {', '.join(STANDINGS)}")
-        if not reason.strip():
-            raise InputError("reason is empty; say why")
-        now = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ")
-        with writing(self._engine, self.place) as connection:
-            if connection.execute(select(Star.id).where(Star.id == star_id)).first() is None:
-                raise NotFoundError(f"star_id is {star_id}; there is no such star")
-            connection.execute(
-                insert(Standing).values(
-                    star_id=star_id, standing=standing, reason=reason.strip(), made_by=made_by, made_utc=now
-                )
+        with self.reading() as connection:
+            must_exist(connection, star_id)
+            rows = standing_rows(connection, star_id)
+        return {
+            "star_id": star_id,
+            "standing": standings_for(rows).get(star_id),
+            "standings": [public_standing(row) for row in rows],
+        }
+
+    def changes(self, star_id: int | None = None, at_utc: str | None = None, most: int = 50) -> Any:
+        """The change log: of a star, or the newest of all; with `at_utc` the star as it stood then.
+
+        See `changes.star_changes`, `changes.star_then` and `changes.recent_changes`.
+        """
+        with self.reading() as connection:
+            if star_id is None:
+                if at_utc is not None:
+                    raise InputError("at is given without a star; give the star too")
+                return recent_changes(connection, most)
+            must_exist(connection, star_id)
+            return (
+                star_changes(connection, star_id) if at_utc is None else star_then(connection, star_id, at_utc)
             )
+
+    def names(self, star_ids: Iterable[int]) -> dict[int, str]:
+        """The names of some stars by their ids."""
+        wanted = sorted(star_ids)
+        found: dict[int, str] = {}
+        with self.reading() as connection:
+            for start in range(0, len(wanted), _MOST_IDS):
+                query = select(Star.id, Star.name).where(Star.id.in_(wanted[start : start + _MOST_IDS]))
+                found |= {row.id: row.name for row in connection.execute(query)}
+        return found
+
+    def check(self, name: str) -> dict[str, Any]:
+        """Whether an edition's files are what its hash says; see `comparison.check_edition`."""
+        from pinlight.catalogue.comparison import check_edition
+
+        return check_edition(self.editions_folder, self._known_edition(name)["name"])
+
+    def compare(self, one: str, other: str | None = None, most: int = 20) -> dict[str, Any]:
+        """What differs between two editions; see `comparison.compare_editions`.
+
+        Standings are those that counted when each was frozen.
+        """
+        from pinlight.catalogue.comparison import compare_editions
+
+        rows = [self._known_edition(one), self._known_edition(other)]
+        with self.reading() as connection:
+            judged = standing_rows(connection)
+        before, after = (
+            standings_for(line for line in judged if line["change_id"] <= row["change_id"]) for row in rows
+        )
+        one_columns, other_columns = (self.columns(row["name"]) for row in rows)
+        names = self.names({*before, *after})
+        return compare_editions(one_columns, other_columns, (before, after), names, most)
 
     def star(self, star_id: int) -> dict[str, Any]:
         """All that is known of one star, ready for JSON.
@@ -278,10 +386,7 @@ class Catalogue:
                 Companion.delta_ks_mag, table=Companion, order=Companion.separation_arcsec,
             )  # fmt: skip
             diameter = rows(Diameter.__table__, table=Diameter)
-            standings = rows(
-                Standing.standing, Standing.reason, Standing.made_by, Standing.made_utc,
-                table=Standing, order=Standing.id,
-            )  # fmt: skip
+            standings = standing_rows(connection, star_id)
             neighbours = [row["neighbour_id"] for row in companions]
             named = connection.execute(select(Star.id, Star.name).where(Star.id.in_(neighbours)))
             neighbour_names = {row.id: row.name for row in named}
@@ -311,8 +416,8 @@ class Catalogue:
                 {**row, "name": neighbour_names.get(row["neighbour_id"])} for row in companions
             ],
             "diameter": self._diameter_facts(diameter[0]) if diameter else None,
-            "standing": standings[-1]["standing"] if standings else None,
-            "standings": standings,
+            "standing": standings_for(standings).get(star_id),
+            "standings": [public_standing(row) for row in standings],
             "source": sources[star["source_id"]].title,
         }  # fmt: skip
 

@@ -6,18 +6,21 @@ from sqlalchemy.orm import DeclarativeBase, Mapped, mapped_column
 __all__ = [
     "SCHEMA",
     "Base",
+    "Change",
+    "ChangeValue",
     "Companion",
     "Diameter",
     "Edition",
     "Identifier",
     "Magnitude",
+    "Member",
     "Source",
     "Standing",
     "Star",
 ]
 
 # The newest migration; a test holds it against the migrations folder.
-SCHEMA = "0001"
+SCHEMA = "0002"
 
 
 class Base(DeclarativeBase):
@@ -32,6 +35,49 @@ class Base(DeclarativeBase):
             "pk": "pk_%(table_name)s",
         }
     )
+
+
+class Change(Base):
+    """One act of one person: who, when and what; `detail` is JSON. Never changed, never removed."""
+
+    __tablename__ = "change"
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    made_utc: Mapped[str]
+    made_by: Mapped[str]
+    action: Mapped[str]
+    detail: Mapped[str]
+
+
+class ChangeValue(Base):
+    """What a change overwrote: JSON of a row's columns before and after. Never changed, never removed.
+
+    Rows that a change added are not repeated here; they name it by their own `change_id`.
+    """
+
+    __tablename__ = "change_value"
+    __table_args__ = (Index(None, "change_id"), Index(None, "star_id"))
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
+    star_id: Mapped[int | None]
+    table_name: Mapped[str]
+    row_key: Mapped[str]
+    before: Mapped[str]
+    after: Mapped[str]
+
+
+class Member(Base):
+    """A person with a role; of the token only a hash is kept, and nothing once it is revoked."""
+
+    __tablename__ = "member"
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    name: Mapped[str] = mapped_column(unique=True)
+    role: Mapped[str]
+    token_hash: Mapped[str | None] = mapped_column(unique=True)
+    made_utc: Mapped[str]
+    revoked_utc: Mapped[str | None]
 
 
 class Source(Base):
@@ -64,6 +110,7 @@ class Star(Base):
     flags: Mapped[str]
     cell: Mapped[int] = mapped_column(index=True)
     source_id: Mapped[int] = mapped_column(ForeignKey("source.id"))
+    change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
 
 
 class Identifier(Base):
@@ -78,6 +125,7 @@ class Identifier(Base):
     key: Mapped[str]
     short: Mapped[bool]
     source_id: Mapped[int] = mapped_column(ForeignKey("source.id"))
+    change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
 
 
 class Magnitude(Base):
@@ -91,6 +139,7 @@ class Magnitude(Base):
     value: Mapped[float]
     error: Mapped[float]
     error_assumed: Mapped[bool]
+    change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
 
 
 class Companion(Base):
@@ -106,6 +155,7 @@ class Companion(Base):
     delta_v_mag: Mapped[float | None]
     delta_ks_mag: Mapped[float | None]
     source_id: Mapped[int] = mapped_column(ForeignKey("source.id"))
+    change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
 
 
 class Diameter(Base):
@@ -130,24 +180,33 @@ class Diameter(Base):
     logg: Mapped[float | None]
     relation_set: Mapped[str]
     parts: Mapped[str]
+    change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
 
 
 class Standing(Base):
-    """A judgement of a star; rows are only ever added, the newest of a star counts."""
+    """A judgement of a star, of one band or mode where these are given; rows are only ever added.
+
+    `uid` is the same wherever the standing is carried, `evidence` a JSON list.
+    """
 
     __tablename__ = "standing"
     __table_args__ = (Index(None, "star_id"),)
 
     id: Mapped[int] = mapped_column(primary_key=True)
+    uid: Mapped[str] = mapped_column(unique=True)
     star_id: Mapped[int] = mapped_column(ForeignKey("star.id"))
     standing: Mapped[str]
+    band: Mapped[str | None]
+    mode: Mapped[str | None]
     reason: Mapped[str]
+    evidence: Mapped[str]
     made_by: Mapped[str]
     made_utc: Mapped[str]
+    change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
 
 
 class Edition(Base):
-    """A frozen state of the catalogue; its name is the beginning of its content's hash."""
+    """A frozen state of the catalogue, after the change `change_id`; named by its content's hash."""
 
     __tablename__ = "edition"
 
@@ -155,3 +214,4 @@ class Edition(Base):
     made_utc: Mapped[str]
     star_count: Mapped[int]
     relation_set: Mapped[str]
+    change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))

@@ -1,6 +1,5 @@
 """The command line: read the options, make one call, show the answer."""
 
-import json
 import signal
 import sys
 import threading
@@ -11,6 +10,11 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from pinlight.errors import InputError, NotFoundError, PinlightError
+from pinlight.faces import team
+from pinlight.faces.options import as_json as _as_json
+from pinlight.faces.options import db as _db
+from pinlight.faces.options import print_json as _print_json
+from pinlight.faces.options import say as _say
 from pinlight.version import __version__
 
 if TYPE_CHECKING:
@@ -47,19 +51,6 @@ class _Group(click.Group):
             context.exit(1)
 
 
-def _db(function: Callable[..., Any]) -> Callable[..., Any]:
-    return click.option(
-        "--db",
-        envvar="PINLIGHT_DB",
-        metavar="URL",
-        help="The catalogue: sqlite:///FILE, a file name, or postgresql+psycopg://…",
-    )(function)
-
-
-def _as_json(function: Callable[..., Any]) -> Callable[..., Any]:
-    return click.option("--json", "as_json", is_flag=True, help="Print JSON.")(function)
-
-
 def _span(function: Callable[..., Any]) -> Callable[..., Any]:
     function = click.option("--to", metavar="UTC", help="End of the span.")(function)
     function = click.option("--from", "from_", metavar="UTC", help="Begin of a span, in place of a night.")(
@@ -67,14 +58,6 @@ def _span(function: Callable[..., Any]) -> Callable[..., Any]:
     )
     night_help = "The dark hours after that date's noon at the array."
     return click.option("--night", metavar="YYYY-MM-DD", help=night_help)(function)
-
-
-def _print_json(answer: Any) -> None:
-    click.echo(json.dumps(answer, indent=1, ensure_ascii=False, allow_nan=False))
-
-
-def _say(step: str) -> None:
-    click.echo(f"… {step}", err=True)
 
 
 def _names(text: str | None) -> list[str] | None:
@@ -89,6 +72,10 @@ def main() -> None:
     The calibration error of a star is the percent error that it puts into the target's
     calibrated squared visibility.
     """
+
+
+for _command in (team.member, team.standing, team.edition, team.changes):
+    main.add_command(_command)
 
 
 @main.command()
@@ -373,11 +360,26 @@ def _write(path: Path, text: str) -> None:
 @click.option("--port", default=8765, show_default=True, type=click.IntRange(1, 65535))
 @click.option("--arrays", type=click.Path(path_type=Path), help="A folder of array files to offer.")
 @click.option("--open", "open_reading", is_flag=True, help="Let anyone who reaches the address read.")
-def serve(db: str | None, host: str, port: int, arrays: Path | None, open_reading: bool) -> None:
-    """Serve the API and the page."""
+@click.option("--members-only", is_flag=True, help="Reading needs a token here too, as behind a proxy.")
+def serve(
+    db: str | None, host: str, port: int, arrays: Path | None, open_reading: bool, members_only: bool
+) -> None:
+    """Serve the API and the page.
+
+    Anyone may read where only this machine reaches the address; elsewhere reading needs a
+    member's token, unless --open is given. Writing always needs one.
+    """
+    from pinlight.catalogue.members import has_members
     from pinlight.catalogue.store import open_catalogue
 
-    _serve(open_catalogue(db), host, port, arrays, open_reading)
+    if open_reading and members_only:
+        raise InputError("open and members-only are both given; give one or neither")
+    catalogue = open_catalogue(db)
+    closed = members_only or (host not in ("127.0.0.1", "localhost", "::1") and not open_reading)
+    if closed and not has_members(catalogue):
+        reason = "reading would need a token there, and the catalogue has no members"
+        raise InputError(f"host is {host}: {reason}; add a member, or --open to let anyone read")
+    _serve(catalogue, host, port, arrays, not closed)
 
 
 def _serve(catalogue: "Catalogue", host: str, port: int, arrays: Path | None, open_reading: bool) -> None:
@@ -385,9 +387,7 @@ def _serve(catalogue: "Catalogue", host: str, port: int, arrays: Path | None, op
 
     from pinlight.faces.http import create_app
 
-    if host not in ("127.0.0.1", "localhost", "::1") and not open_reading:
-        raise InputError(f"host is {host}, which others can reach; add --open to let anyone there read")
-    app = create_app(catalogue, arrays)
+    app = create_app(catalogue, arrays, open_reading=open_reading)
     try:
         server = waitress.create_server(app, host=host, port=port, threads=8, ident="pinlight")
     except (OSError, ValueError) as error:
@@ -425,4 +425,4 @@ def demo(db: str | None, once: bool, port: int, as_json: bool) -> None:
         for ranking in rankings:
             show_ranking(ranking, most=5)
     if not once:
-        _serve(catalogue, "127.0.0.1", port, None, False)
+        _serve(catalogue, "127.0.0.1", port, None, True)

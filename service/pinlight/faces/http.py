@@ -11,12 +11,21 @@ from werkzeug.exceptions import HTTPException, NotFound
 
 from pinlight.arrays.geometry import baselines
 from pinlight.catalogue.store import Catalogue
-from pinlight.errors import CatalogueError, InputError, NotFoundError, PinlightError
+from pinlight.errors import (
+    CatalogueError,
+    InputError,
+    NotAllowedError,
+    NotFoundError,
+    PinlightError,
+    TokenError,
+)
+from pinlight.faces.access import challenge, check_access
 from pinlight.faces.frame import page_policy, prepare_templates, render_page
 from pinlight.faces.models import PlanQuestion, RankingQuestion, StarsQuestion
 from pinlight.faces.night import night
 from pinlight.faces.openapi import describe_api
 from pinlight.faces.page import page
+from pinlight.faces.records import records
 from pinlight.faces.service import (
     Service,
     answer_plan,
@@ -33,13 +42,13 @@ from pinlight.version import __version__
 
 __all__ = ["create_app"]
 
-STATUS = {InputError: 400, NotFoundError: 404, CatalogueError: 503}
+STATUS = {InputError: 400, TokenError: 401, NotAllowedError: 403, NotFoundError: 404, CatalogueError: 503}
 _LARGEST_BODY = 1_000_000
 api = Blueprint("api", __name__, url_prefix="/api/v1")
 
 
-def create_app(catalogue: Catalogue, arrays_folder: Path | None = None) -> Flask:
-    """The application over an open catalogue.
+def create_app(catalogue: Catalogue, arrays_folder: Path | None = None, *, open_reading: bool = True) -> Flask:
+    """The application over an open catalogue; with `open_reading` off even reading needs a token.
 
     Raises
     ------
@@ -52,8 +61,10 @@ def create_app(catalogue: Catalogue, arrays_folder: Path | None = None) -> Flask
     arrays = known_arrays(arrays_folder)
     if not arrays:
         raise InputError(f"arrays is {arrays_folder}, a folder without .toml files")
-    app.extensions["pinlight"] = Service(catalogue, arrays, arrays_folder)
+    app.extensions["pinlight"] = Service(catalogue, arrays, arrays_folder, open_reading)
+    app.before_request(check_access)
     app.register_blueprint(api)
+    app.register_blueprint(records)
     app.register_blueprint(page)
     app.register_blueprint(night)
     prepare_templates(app)
@@ -75,8 +86,11 @@ def _problem(status: int, title: str, detail: str) -> Response:
 
 def _library_problem(error: PinlightError) -> Response:
     status = next((code for kind, code in STATUS.items() if isinstance(error, kind)), 500)
-    titles = {400: "Impossible", 404: "Not known", 503: "No catalogue"}
-    return _problem(status, titles.get(status, "Error"), str(error))
+    titles = {400: "Impossible", 401: "No token", 403: "Not allowed", 404: "Not known", 503: "No catalogue"}
+    response = _problem(status, titles.get(status, "Error"), str(error))
+    if isinstance(error, TokenError):
+        response.headers["WWW-Authenticate"] = challenge()
+    return response
 
 
 def _http_problem(error: HTTPException) -> Response:

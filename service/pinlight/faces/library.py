@@ -94,7 +94,7 @@ def rank(
         limits=setup.limits.replace(separation_max_deg, v2_min, magnitude_max),
         judge=judge,
         best=best,
-        standings=catalogue.standings(),
+        standings=catalogue.standings(setup.band, setup.mode_name, setup.array_name),
         clock=clock,
         with_ids=[catalogue.find(name) for name in with_ or ()],
     )
@@ -176,11 +176,12 @@ def plan_night(
     clock = make_clock(found, stations, night, None, from_, to)
     if clock is None:
         raise InputError("night is missing; write the date of its evening, such as 2026-12-01")
+    setup = setup_of(found, station_names(stations), mode)
     return plan_columns(
         catalogue.columns(edition),
         requests,
-        setup_of(found, station_names(stations), mode),
+        setup,
         clock,
-        standings=catalogue.standings(),
+        standings=catalogue.standings(setup.band, setup.mode_name, setup.array_name),
         time_limit_s=time_limit_s,
     )

@@ -6,13 +6,24 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, Discriminator, Fiel
 
 __all__ = [
     "ArraysAnswer",
+    "ChangesAnswer",
+    "ChangesQuestion",
+    "ComparisonAnswer",
+    "ComparisonQuestion",
+    "EditionAnswer",
+    "EditionCheck",
+    "EditionsAnswer",
     "HealthAnswer",
     "PlanAnswer",
     "PlanQuestion",
     "Problem",
     "RankingAnswer",
     "RankingQuestion",
+    "StandingQuestion",
+    "StandingRecord",
+    "StandingsAnswer",
     "StarAnswer",
+    "StarChangesAnswer",
     "StarsAnswer",
     "StarsQuestion",
     "TargetQuestion",
@@ -109,6 +120,30 @@ class StarsQuestion(_Question):
     dec_deg: float | None = None
     radius_deg: Annotated[float, Field(gt=0, le=180)] = 1.0
     limit: Annotated[int, Field(ge=1, le=10_000)] = 100
+
+
+class StandingQuestion(_Question):
+    """A judgement of a star, of one band or mode where these are given."""
+
+    standing: str
+    reason: str
+    band: str | None = None
+    mode: Annotated[str | None, Field(description="MODE or ARRAY/MODE.")] = None
+    evidence: Annotated[list[str | dict[str, Any]], Field(max_length=100)] = Field(default_factory=list)
+
+
+class ChangesQuestion(_Question):
+    """How many changes, or at what time a star is wanted."""
+
+    most: Annotated[int, Field(ge=1, le=1000)] = 50
+    at: Annotated[str | None, Field(description="A past time, UTC.")] = None
+
+
+class ComparisonQuestion(_Question):
+    """The other edition, by default the newest, and how many stars to name."""
+
+    other: str | None = None
+    most: Annotated[int, Field(ge=0, le=1000)] = 20
 
 
 class Measured(_Answer):
@@ -330,10 +365,111 @@ class Neighbour(_Answer):
 
 
 class StandingRecord(_Answer):
+    """One judgement; `uid` is the same wherever it is carried."""
+
     standing: str
+    band: str | None
+    mode: str | None
     reason: str
+    evidence: list[str | dict[str, Any]]
     made_by: str
     made_utc: str
+    uid: str
+
+
+class StandingsAnswer(_Answer):
+    """All judgements of a star, oldest first, and the general one that counts."""
+
+    star_id: int
+    standing: str | None
+    standings: list[StandingRecord]
+
+
+class ChangeRecord(_Answer):
+    """Who changed something, when and what; of a star also which rows were added and overwritten."""
+
+    change_id: int
+    made_utc: str
+    made_by: str
+    action: str
+    detail: dict[str, Any]
+    added: dict[str, int] | None = None
+    overwritten: list[dict[str, Any]] | None = None
+
+
+class ChangesAnswer(_Answer):
+    """The newest changes of the catalogue, newest first."""
+
+    changes: list[ChangeRecord]
+
+
+class CellThen(_Answer):
+    value: str | float | int | bool | list[Any] | None
+    made_by: str
+    made_utc: str
+    action: str
+
+
+class StarThen(_Answer):
+    star_id: int
+    at_utc: str
+    rows: dict[str, list[dict[str, CellThen]]]
+
+
+class StarChangesAnswer(_Answer):
+    """All changes of a star, oldest first; or with `at` how it stood then."""
+
+    star_id: int
+    changes: list[ChangeRecord] | None = None
+    then: StarThen | None = None
+
+
+class EditionAnswer(_Answer):
+    """A frozen state of the catalogue, made after the change `change_id`."""
+
+    name: str
+    made_utc: str
+    star_count: int
+    relation_set: str
+    change_id: int
+
+
+class EditionsAnswer(_Answer):
+    """All editions, newest first."""
+
+    editions: list[EditionAnswer]
+
+
+class EditionCheck(_Answer):
+    """Whether an edition's files are what its hash says."""
+
+    name: str
+    sound: bool
+    hash: str | None
+    problem: str | None
+
+
+class DifferingStar(_Answer):
+    star_id: int
+    name: str
+    values: dict[str, list[Any]] = Field(default_factory=dict)
+
+
+class Differences(_Answer):
+    count: int
+    stars: list[DifferingStar]
+
+
+class ComparisonAnswer(_Answer):
+    """What differs between two editions; of each kind how many stars, and the first of them."""
+
+    one: str
+    other: str
+    added: Differences
+    removed: Differences
+    changed: Differences
+    diameters: Differences
+    standings: Differences
 
 
 class StarAnswer(_Answer):

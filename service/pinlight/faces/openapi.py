@@ -7,13 +7,24 @@ from pydantic.json_schema import models_json_schema
 
 from pinlight.faces.models import (
     ArraysAnswer,
+    ChangesAnswer,
+    ChangesQuestion,
+    ComparisonAnswer,
+    ComparisonQuestion,
+    EditionAnswer,
+    EditionCheck,
+    EditionsAnswer,
     HealthAnswer,
     PlanAnswer,
     PlanQuestion,
     Problem,
     RankingAnswer,
     RankingQuestion,
+    StandingQuestion,
+    StandingRecord,
+    StandingsAnswer,
     StarAnswer,
+    StarChangesAnswer,
     StarsAnswer,
     StarsQuestion,
     TargetQuestion,
@@ -22,8 +33,24 @@ from pinlight.version import __version__
 
 __all__ = ["describe_api"]
 
-_QUESTIONS = (RankingQuestion, PlanQuestion, StarsQuestion, TargetQuestion)
-_ANSWERS = (RankingAnswer, PlanAnswer, StarsAnswer, StarAnswer, ArraysAnswer, HealthAnswer, Problem)
+_QUESTIONS = (RankingQuestion, PlanQuestion, StarsQuestion, TargetQuestion, StandingQuestion)
+_ANSWERS = (
+    RankingAnswer,
+    PlanAnswer,
+    StarsAnswer,
+    StarAnswer,
+    StandingRecord,
+    StandingsAnswer,
+    ChangesAnswer,
+    StarChangesAnswer,
+    EditionAnswer,
+    EditionsAnswer,
+    EditionCheck,
+    ComparisonAnswer,
+    ArraysAnswer,
+    HealthAnswer,
+    Problem,
+)
 
 
 def _schema(model: type[BaseModel]) -> dict[str, str]:
@@ -48,16 +75,20 @@ def _parameters(model: type[BaseModel]) -> list[dict[str, Any]]:
     return parameters
 
 
-def _responses(model: type[BaseModel], *problems: int) -> dict[str, Any]:
+def _responses(model: type[BaseModel], *problems: int, done: str = "200") -> dict[str, Any]:
     meanings = {400: "Something asked for is impossible.", 404: "Not known.", 413: "The body is too large."}
+    meanings |= {
+        401: "A member's token is needed, or it is not known.",
+        403: "The member's role does not suffice.",
+    }
     meanings |= {415: "The body is not JSON.", 503: "The catalogue cannot be read."}
     described: dict[str, Any] = {
-        "200": {
+        done: {
             "description": (model.__doc__ or model.__name__).strip().splitlines()[0],
             "content": {"application/json": {"schema": _schema(model)}},
         }
     }
-    for status in (*problems, 503):
+    for status in sorted({*problems, 401, 503}):
         described[str(status)] = {
             "description": meanings[status],
             "content": {"application/problem+json": {"schema": _schema(Problem)}},
@@ -71,6 +102,7 @@ def describe_api() -> dict[str, Any]:
     kinds += [(model, "serialization") for model in _ANSWERS]
     _, schemas = models_json_schema(kinds, ref_template="#/components/schemas/{model}")
     star_id = {"name": "star_id", "in": "path", "required": True, "schema": {"type": "integer", "minimum": 1}}
+    name = {"name": "name", "in": "path", "required": True, "schema": {"type": "string"}}
     return {
         "openapi": "3.1.0",
         "info": {
@@ -124,6 +156,68 @@ def describe_api() -> dict[str, Any]:
                     "responses": _responses(StarAnswer, 404),
                 }
             },
+            "/api/v1/stars/{star_id}/standings": {
+                "get": {
+                    "operationId": "listStandings",
+                    "summary": "All judgements of a star",
+                    "parameters": [star_id],
+                    "responses": _responses(StandingsAnswer, 404),
+                },
+                "post": {
+                    "operationId": "setStanding",
+                    "summary": "Judge a star; takes an editor",
+                    "parameters": [star_id],
+                    "requestBody": {
+                        "required": True,
+                        "content": {"application/json": {"schema": _schema(StandingQuestion)}},
+                    },
+                    "responses": _responses(StandingRecord, 400, 403, 404, 413, 415, done="201"),
+                },
+            },
+            "/api/v1/stars/{star_id}/changes": {
+                "get": {
+                    "operationId": "listChangesOfStar",
+                    "summary": "Who changed what of a star, or how it stood at a past time",
+                    "parameters": [star_id, *_parameters(ChangesQuestion)],
+                    "responses": _responses(StarChangesAnswer, 400, 404),
+                }
+            },
+            "/api/v1/changes": {
+                "get": {
+                    "operationId": "listChanges",
+                    "summary": "The newest changes of the catalogue",
+                    "parameters": [one for one in _parameters(ChangesQuestion) if one["name"] == "most"],
+                    "responses": _responses(ChangesAnswer, 400),
+                }
+            },
+            "/api/v1/editions": {
+                "get": {
+                    "operationId": "listEditions",
+                    "summary": "All editions",
+                    "responses": _responses(EditionsAnswer),
+                },
+                "post": {
+                    "operationId": "freezeEdition",
+                    "summary": "Freeze the present state; takes a keeper; 200 where it was frozen already",
+                    "responses": _responses(EditionAnswer, 403, done="201"),
+                },
+            },
+            "/api/v1/editions/{name}": {
+                "get": {
+                    "operationId": "checkEdition",
+                    "summary": "Whether an edition is what its hash says",
+                    "parameters": [name],
+                    "responses": _responses(EditionCheck, 404),
+                }
+            },
+            "/api/v1/editions/{name}/comparison": {
+                "get": {
+                    "operationId": "compareEditions",
+                    "summary": "What differs between two editions",
+                    "parameters": [name, *_parameters(ComparisonQuestion)],
+                    "responses": _responses(ComparisonAnswer, 400, 404),
+                }
+            },
             "/api/v1/arrays": {
                 "get": {
                     "operationId": "listArrays",
@@ -139,5 +233,9 @@ def describe_api() -> dict[str, Any]:
                 }
             },
         },
-        "components": {"schemas": schemas["$defs"]},
+        "components": {
+            "schemas": schemas["$defs"],
+            "securitySchemes": {"token": {"type": "http", "scheme": "bearer"}},
+        },
+        "security": [{}, {"token": []}],
     }

@@ -40,6 +40,7 @@ class Service(NamedTuple):
     catalogue: Catalogue
     arrays: dict[str, Array]
     arrays_folder: Path | None
+    open_reading: bool = True
 
 
 def service() -> Service:

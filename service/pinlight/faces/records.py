@@ -1,0 +1,64 @@
+"""The team's records over HTTP: standings, the change log, editions."""
+
+from typing import Any
+
+from flask import Blueprint, request
+
+from pinlight.faces.access import acting_catalogue
+from pinlight.faces.models import ChangesQuestion, ComparisonQuestion, StandingQuestion
+from pinlight.faces.service import from_query, posted_json, read_question, service
+
+__all__ = ["records"]
+
+records = Blueprint("records", __name__, url_prefix="/api/v1")
+
+
+@records.get("/stars/<int:star_id>/standings")
+def star_standings(star_id: int) -> dict[str, Any]:
+    return service().catalogue.star_standings(star_id)
+
+
+@records.post("/stars/<int:star_id>/standings")
+def set_standing(star_id: int) -> tuple[dict[str, Any], int]:
+    catalogue = acting_catalogue()
+    catalogue.person().require("editor", "set a standing")
+    asked = read_question(StandingQuestion, posted_json())
+    return catalogue.set_standing(star_id, **asked.model_dump()), 201
+
+
+@records.get("/changes")
+def changes() -> dict[str, Any]:
+    asked = read_question(ChangesQuestion, from_query(request.args))
+    return {"changes": service().catalogue.changes(most=asked.most)}
+
+
+@records.get("/stars/<int:star_id>/changes")
+def star_changes(star_id: int) -> dict[str, Any]:
+    asked = read_question(ChangesQuestion, from_query(request.args))
+    found = service().catalogue.changes(star_id, asked.at)
+    return {"star_id": star_id, "changes": found} if asked.at is None else {"star_id": star_id, "then": found}
+
+
+@records.get("/editions")
+def editions() -> dict[str, Any]:
+    return {"editions": service().catalogue.editions()}
+
+
+@records.post("/editions")
+def freeze() -> tuple[dict[str, Any], int]:
+    catalogue = acting_catalogue()
+    before = {row["name"] for row in catalogue.editions()}
+    name = catalogue.freeze()
+    row = next(row for row in catalogue.editions() if row["name"] == name)
+    return row, 200 if name in before else 201
+
+
+@records.get("/editions/<name>")
+def edition(name: str) -> dict[str, Any]:
+    return service().catalogue.check(name)
+
+
+@records.get("/editions/<name>/comparison")
+def comparison(name: str) -> dict[str, Any]:
+    asked = read_question(ComparisonQuestion, from_query(request.args))
+    return service().catalogue.compare(name, asked.other, asked.most)
