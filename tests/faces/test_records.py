@@ -271,6 +271,6 @@ def test_editions_by_command(path):
 
 def test_serving_elsewhere_needs_members_or_an_open_door(path):
     refused = run("serve", "--host", "0.0.0.0", "--db", path, code=2)
-    assert "add a member, or --open to let anyone read" in refused.stderr
+    assert "add --open to let anyone there read, or a member" in refused.stderr
     both = run("serve", "--open", "--members-only", "--db", path, code=2)
     assert "open and members-only are both given" in both.stderr

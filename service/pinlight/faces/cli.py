@@ -377,8 +377,8 @@ def serve(
     catalogue = open_catalogue(db)
     closed = members_only or (host not in ("127.0.0.1", "localhost", "::1") and not open_reading)
     if closed and not has_members(catalogue):
-        reason = "reading would need a token there, and the catalogue has no members"
-        raise InputError(f"host is {host}: {reason}; add a member, or --open to let anyone read")
+        where = "others can reach" if not members_only else "is for members only"
+        raise InputError(f"host is {host}, which {where}; add --open to let anyone there read, or a member")
     _serve(catalogue, host, port, arrays, not closed)
 
 
