@@ -110,6 +110,16 @@ def opened() -> Iterator[Callable[[str], Catalogue]]:
 
 
 @pytest.fixture(scope="session")
+def served(catalogue: Catalogue) -> Iterator[str]:
+    """Address of the application over the seeded catalogue."""
+    from pinlight.faces.http import create_app
+    from tests.served import serving
+
+    with serving(create_app(catalogue)) as address:
+        yield address
+
+
+@pytest.fixture(scope="session")
 def north():
     return known_arrays()["north"]
 

@@ -2,15 +2,12 @@
 
 import os
 import shutil
-import threading
 import time
 from pathlib import Path
 
 import pytest
-import waitress
 
 import pinlight as pl
-from pinlight.faces.http import create_app
 
 # Set where a test that needs the browser may not be skipped.
 MUST_RUN = "PINLIGHT_TEST_BROWSER"
@@ -21,15 +18,6 @@ NIGHT = "target=upsilon+And&array=north&mode=H&night=2026-12-01"
 PLAN = "targets=upsilon+And%0AHD+3651%0A61.9+-67.3&array=north&mode=H&night=2026-12-01"
 PHONE = {"width": 390, "height": 844}
 DESKTOP = {"width": 1440, "height": 900}
-
-
-@pytest.fixture(scope="module")
-def served(catalogue):
-    """Address of the application on the server that it is served by."""
-    server = waitress.create_server(create_app(catalogue), host="127.0.0.1", port=0, threads=6)
-    threading.Thread(target=server.run, daemon=True).start()
-    yield f"http://127.0.0.1:{server.effective_port}"
-    server.close()
 
 
 @pytest.fixture(scope="module")

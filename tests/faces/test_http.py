@@ -285,7 +285,7 @@ def test_the_openapi_description_covers_every_route(client):
     parameters = {p["name"] for p in described["paths"]["/api/v1/rankings"]["get"]["parameters"]}
     assert parameters == {
         "target", "array", "stations", "mode", "baseline_m", "wavelength_um", "separation_max_deg",
-        "magnitude_max", "v2_min", "judge", "best", "edition", "night", "at", "from", "to", "with",
+        "magnitude_max", "v2_min", "judge", "best", "edition", "night", "at", "from", "to", "with", "format",
     }  # fmt: skip
     text = json.dumps(described)
     for reference in {part.split('"')[0] for part in text.split("#/components/schemas/")[1:]}:

@@ -25,17 +25,21 @@ from pinlight.faces.models import PlanQuestion, RankingQuestion, StarsQuestion
 from pinlight.faces.night import night
 from pinlight.faces.openapi import describe_api
 from pinlight.faces.page import page
+from pinlight.faces.papers import plan_rows
 from pinlight.faces.records import records
 from pinlight.faces.service import (
     Service,
     answer_plan,
     answer_ranking,
+    as_asked,
     from_query,
     posted_json,
     read_question,
     service,
 )
 from pinlight.faces.setups import known_arrays
+from pinlight.faces.tables import stars_table, table_of
+from pinlight.faces.vo import vo
 from pinlight.ranking.columns import StarColumns, flag_words
 from pinlight.sky.positions import check_position
 from pinlight.version import __version__
@@ -67,6 +71,7 @@ def create_app(catalogue: Catalogue, arrays_folder: Path | None = None, *, open_
     app.register_blueprint(records)
     app.register_blueprint(page)
     app.register_blueprint(night)
+    app.register_blueprint(vo)
     prepare_templates(app)
     app.register_error_handler(PinlightError, _library_problem)
     app.register_error_handler(HTTPException, _http_problem)
@@ -112,29 +117,33 @@ def _headers(response: Response) -> Response:
 
 
 @api.get("/rankings")
-def rankings() -> dict[str, Any]:
-    return answer_ranking(read_question(RankingQuestion, from_query(request.args))).to_dict()
+def rankings() -> dict[str, Any] | Response:
+    ranking = answer_ranking(read_question(RankingQuestion, from_query(request.args)))
+    return as_asked(ranking.to_dict(), "calibrators", ranking.table)
 
 
 @api.post("/rankings")
-def rankings_posted() -> dict[str, Any]:
-    return answer_ranking(read_question(RankingQuestion, posted_json())).to_dict()
+def rankings_posted() -> dict[str, Any] | Response:
+    ranking = answer_ranking(read_question(RankingQuestion, posted_json()))
+    return as_asked(ranking.to_dict(), "calibrators", ranking.table)
 
 
 @api.post("/plans")
-def plans() -> dict[str, Any]:
-    return answer_plan(read_question(PlanQuestion, posted_json())).to_dict()
+def plans() -> dict[str, Any] | Response:
+    plan = answer_plan(read_question(PlanQuestion, posted_json()))
+    return as_asked(plan.to_dict(), "looks", lambda: table_of(plan_rows(plan), {"edition": plan.edition}))
 
 
 @api.get("/stars")
-def stars() -> dict[str, Any]:
+def stars() -> dict[str, Any] | Response:
     question = read_question(StarsQuestion, from_query(request.args))
     columns = service().catalogue.columns()
     if question.name is not None:
         if question.ra_deg is not None or question.dec_deg is not None:
             raise InputError("name and a position are both given; give one of them")
         rows = np.flatnonzero(columns.ids == service().catalogue.find(question.name))
-        return {"edition": columns.edition, "count": len(rows), "stars": _briefs(columns, rows)}
+        answer = {"edition": columns.edition, "count": len(rows), "stars": _briefs(columns, rows)}
+        return as_asked(answer, "stars", lambda: stars_table(columns, rows))
     if question.ra_deg is None or question.dec_deg is None:
         missing = "name is" if question.ra_deg is question.dec_deg else (
             "dec_deg is" if question.dec_deg is None else "ra_deg is"
@@ -143,11 +152,12 @@ def stars() -> dict[str, Any]:
     place = check_position(question.ra_deg, question.dec_deg)
     rows, apart = columns.cone(*place, question.radius_deg)
     nearest = np.argsort(apart, kind="stable")[: question.limit]
-    return {
+    answer = {
         "edition": columns.edition,
         "count": len(rows),
         "stars": _briefs(columns, rows[nearest], apart[nearest].tolist()),
     }
+    return as_asked(answer, "stars", lambda: stars_table(columns, rows[nearest], apart[nearest]))
 
 
 def _briefs(
@@ -189,24 +199,23 @@ def star(star_id: int) -> dict[str, Any]:
 
 
 @api.get("/arrays")
-def arrays() -> dict[str, Any]:
-    return {
-        "arrays": [
-            {
-                "key": key,
-                "name": array.name,
-                "latitude_deg": array.latitude_deg,
-                "longitude_deg": array.longitude_deg,
-                "height_m": array.height_m,
-                "stations": [station.name for station in array.station],
-                "longest_baseline_m": round(baselines(array.station)[0].length_m, 3),
-                "modes": [mode.model_dump() for mode in array.mode],
-                "limits": array.limits.model_dump(),
-                "drift": array.drift.model_dump(),
-            }
-            for key, array in service().arrays.items()
-        ]
-    }
+def arrays() -> dict[str, Any] | Response:
+    listed = [
+        {
+            "key": key,
+            "name": array.name,
+            "latitude_deg": array.latitude_deg,
+            "longitude_deg": array.longitude_deg,
+            "height_m": array.height_m,
+            "stations": [station.name for station in array.station],
+            "longest_baseline_m": round(baselines(array.station)[0].length_m, 3),
+            "modes": [mode.model_dump() for mode in array.mode],
+            "limits": array.limits.model_dump(),
+            "drift": array.drift.model_dump(),
+        }
+        for key, array in service().arrays.items()
+    ]
+    return as_asked({"arrays": listed}, "arrays", lambda: table_of(listed))
 
 
 @api.get("/health")

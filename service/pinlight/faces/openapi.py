@@ -29,6 +29,7 @@ from pinlight.faces.models import (
     StarsQuestion,
     TargetQuestion,
 )
+from pinlight.faces.tables import CONTENT_TYPES, FORMATS
 from pinlight.version import __version__
 
 __all__ = ["describe_api"]
@@ -75,6 +76,22 @@ def _parameters(model: type[BaseModel]) -> list[dict[str, Any]]:
     return parameters
 
 
+_FORMAT = {
+    "name": "format",
+    "in": "query",
+    "required": False,
+    "schema": {"type": "string", "enum": list(FORMATS), "default": "json"},
+    "description": "The list as a table for other tools.",
+}
+
+
+def _listed(responses: dict[str, Any]) -> dict[str, Any]:
+    """Responses of a list that also comes as a table."""
+    for kind in CONTENT_TYPES.values():
+        responses["200"]["content"][kind.split(";")[0]] = {"schema": {"type": "string"}}
+    return responses
+
+
 def _responses(model: type[BaseModel], *problems: int, done: str = "200") -> dict[str, Any]:
     meanings = {400: "Something asked for is impossible.", 404: "Not known.", 413: "The body is too large."}
     meanings |= {
@@ -116,8 +133,8 @@ def describe_api() -> dict[str, Any]:
                 "get": {
                     "operationId": "rank",
                     "summary": "Rank calibrators for a target",
-                    "parameters": _parameters(RankingQuestion),
-                    "responses": _responses(RankingAnswer, 400, 404),
+                    "parameters": [*_parameters(RankingQuestion), _FORMAT],
+                    "responses": _listed(_responses(RankingAnswer, 400, 404)),
                 },
                 "post": {
                     "operationId": "rankPosted",
@@ -126,7 +143,8 @@ def describe_api() -> dict[str, Any]:
                         "required": True,
                         "content": {"application/json": {"schema": _schema(RankingQuestion)}},
                     },
-                    "responses": _responses(RankingAnswer, 400, 404, 413, 415),
+                    "parameters": [_FORMAT],
+                    "responses": _listed(_responses(RankingAnswer, 400, 404, 413, 415)),
                 },
             },
             "/api/v1/plans": {
@@ -137,15 +155,16 @@ def describe_api() -> dict[str, Any]:
                         "required": True,
                         "content": {"application/json": {"schema": _schema(PlanQuestion)}},
                     },
-                    "responses": _responses(PlanAnswer, 400, 404, 413, 415),
+                    "parameters": [_FORMAT],
+                    "responses": _listed(_responses(PlanAnswer, 400, 404, 413, 415)),
                 }
             },
             "/api/v1/stars": {
                 "get": {
                     "operationId": "findStars",
                     "summary": "Stars by name or around a place",
-                    "parameters": _parameters(StarsQuestion),
-                    "responses": _responses(StarsAnswer, 400, 404),
+                    "parameters": [*_parameters(StarsQuestion), _FORMAT],
+                    "responses": _listed(_responses(StarsAnswer, 400, 404)),
                 }
             },
             "/api/v1/stars/{star_id}": {
@@ -160,8 +179,8 @@ def describe_api() -> dict[str, Any]:
                 "get": {
                     "operationId": "listStandings",
                     "summary": "All judgements of a star",
-                    "parameters": [star_id],
-                    "responses": _responses(StandingsAnswer, 404),
+                    "parameters": [star_id, _FORMAT],
+                    "responses": _listed(_responses(StandingsAnswer, 400, 404)),
                 },
                 "post": {
                     "operationId": "setStanding",
@@ -186,15 +205,19 @@ def describe_api() -> dict[str, Any]:
                 "get": {
                     "operationId": "listChanges",
                     "summary": "The newest changes of the catalogue",
-                    "parameters": [one for one in _parameters(ChangesQuestion) if one["name"] == "most"],
-                    "responses": _responses(ChangesAnswer, 400),
+                    "parameters": [
+                        *(one for one in _parameters(ChangesQuestion) if one["name"] == "most"),
+                        _FORMAT,
+                    ],
+                    "responses": _listed(_responses(ChangesAnswer, 400)),
                 }
             },
             "/api/v1/editions": {
                 "get": {
                     "operationId": "listEditions",
                     "summary": "All editions",
-                    "responses": _responses(EditionsAnswer),
+                    "parameters": [_FORMAT],
+                    "responses": _listed(_responses(EditionsAnswer, 400)),
                 },
                 "post": {
                     "operationId": "freezeEdition",
@@ -222,7 +245,8 @@ def describe_api() -> dict[str, Any]:
                 "get": {
                     "operationId": "listArrays",
                     "summary": "The arrays that this server knows",
-                    "responses": _responses(ArraysAnswer),
+                    "parameters": [_FORMAT],
+                    "responses": _listed(_responses(ArraysAnswer, 400)),
                 }
             },
             "/api/v1/health": {

@@ -4,29 +4,33 @@ import csv
 import io
 from datetime import UTC, datetime
 from importlib.resources import files
+from typing import Any
 
 from pinlight.planning.night import NightPlan
 from pinlight.sky.time import format_utc
 from pinlight.version import __version__
 
-__all__ = ["plan_csv", "plan_ics", "plan_page"]
+__all__ = ["plan_csv", "plan_ics", "plan_page", "plan_rows"]
 
 _COLUMNS = ("block", "target", "role", "name", "star_id", "start_utc", "end_utc", "calibration_error_percent")
+
+
+def plan_rows(plan: NightPlan) -> list[dict[str, Any]]:
+    """A night's looks as rows of one table, numbered by block."""
+    rows = []
+    for number, block in enumerate(plan.to_dict()["blocks"], start=1):
+        for look in block["looks"]:
+            facts = block | look | {"block": number}
+            rows.append({column: facts[column] for column in _COLUMNS})
+    return rows
 
 
 def plan_csv(plan: NightPlan) -> str:
     """One line a look."""
     text = io.StringIO()
-    writer = csv.writer(text, lineterminator="\n")
-    writer.writerow(_COLUMNS)
-    for number, block in enumerate(plan.to_dict()["blocks"], start=1):
-        for look in block["looks"]:
-            writer.writerow(
-                [
-                    number, block["target"], look["role"], look["name"], look["star_id"], look["start_utc"],
-                    look["end_utc"], block["calibration_error_percent"],
-                ]
-            )  # fmt: skip
+    writer = csv.DictWriter(text, _COLUMNS, lineterminator="\n")
+    writer.writeheader()
+    writer.writerows(plan_rows(plan))
     return text.getvalue()
 
 

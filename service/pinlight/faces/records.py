@@ -2,11 +2,12 @@
 
 from typing import Any
 
-from flask import Blueprint, request
+from flask import Blueprint, Response, request
 
 from pinlight.faces.access import acting_catalogue
 from pinlight.faces.models import ChangesQuestion, ComparisonQuestion, StandingQuestion
-from pinlight.faces.service import from_query, posted_json, read_question, service
+from pinlight.faces.service import as_asked, from_query, posted_json, read_question, service
+from pinlight.faces.tables import table_of
 
 __all__ = ["records"]
 
@@ -14,8 +15,9 @@ records = Blueprint("records", __name__, url_prefix="/api/v1")
 
 
 @records.get("/stars/<int:star_id>/standings")
-def star_standings(star_id: int) -> dict[str, Any]:
-    return service().catalogue.star_standings(star_id)
+def star_standings(star_id: int) -> dict[str, Any] | Response:
+    answer = service().catalogue.star_standings(star_id)
+    return as_asked(answer, "standings", lambda: table_of(answer["standings"]))
 
 
 @records.post("/stars/<int:star_id>/standings")
@@ -27,9 +29,10 @@ def set_standing(star_id: int) -> tuple[dict[str, Any], int]:
 
 
 @records.get("/changes")
-def changes() -> dict[str, Any]:
+def changes() -> dict[str, Any] | Response:
     asked = read_question(ChangesQuestion, from_query(request.args))
-    return {"changes": service().catalogue.changes(most=asked.most)}
+    found = service().catalogue.changes(most=asked.most)
+    return as_asked({"changes": found}, "changes", lambda: table_of(found))
 
 
 @records.get("/stars/<int:star_id>/changes")
@@ -40,8 +43,9 @@ def star_changes(star_id: int) -> dict[str, Any]:
 
 
 @records.get("/editions")
-def editions() -> dict[str, Any]:
-    return {"editions": service().catalogue.editions()}
+def editions() -> dict[str, Any] | Response:
+    found = service().catalogue.editions()
+    return as_asked({"editions": found}, "editions", lambda: table_of(found))
 
 
 @records.post("/editions")

@@ -1,10 +1,11 @@
 """What the HTTP interface and the page share: the service they ask, and how questions are read."""
 
 import json
+from collections.abc import Callable
 from pathlib import Path
-from typing import Any, NamedTuple, TypeVar
+from typing import TYPE_CHECKING, Any, NamedTuple, TypeVar
 
-from flask import current_app, request
+from flask import Response, current_app, request
 from pydantic import BaseModel, ValidationError
 from werkzeug.datastructures import MultiDict
 from werkzeug.exceptions import BadRequest
@@ -15,16 +16,21 @@ from pinlight.errors import InputError
 from pinlight.faces.library import plan_night, rank
 from pinlight.faces.models import PlanQuestion, RankingQuestion, TargetQuestion
 from pinlight.faces.setups import named_array
+from pinlight.faces.tables import CONTENT_TYPES, FORMATS, write_table
 from pinlight.faces.targets import placed_target
 from pinlight.planning.night import NightPlan, Request
 from pinlight.ranking.result import Ranking
 from pinlight.ranking.target import Target
 from pinlight.sky.time import parse_utc
 
+if TYPE_CHECKING:
+    from astropy.table import Table
+
 __all__ = [
     "Service",
     "answer_plan",
     "answer_ranking",
+    "as_asked",
     "from_query",
     "posted_json",
     "read_question",
@@ -62,11 +68,24 @@ def read_question(model: type[Question], values: Any) -> Question:
 
 
 def from_query(values: MultiDict[str, str]) -> dict[str, str]:
-    """A query's parameters; one given twice is refused, an empty one counts as not given."""
+    """A query's parameters but `format`; one given twice is refused, an empty one counts as not given."""
     for name in values:
         if len(values.getlist(name)) > 1:
             raise InputError(f"{name} is given {len(values.getlist(name))} times; give it once")
-    return {name: value for name, value in values.items() if value.strip()}
+    return {name: value for name, value in values.items() if value.strip() and name != "format"}
+
+
+def as_asked(answer: dict[str, Any], name: str, make: "Callable[[], Table]") -> dict[str, Any] | Response:
+    """An answer as JSON or, by ``?format=``, its list as a table for other tools."""
+    kind = request.args.get("format") or "json"
+    if kind == "json":
+        return answer
+    if kind not in FORMATS:
+        raise InputError(f"format is {kind!r}; it may be one of {', '.join(FORMATS)}")
+    response = Response(write_table(make(), kind, name), content_type=CONTENT_TYPES[kind])
+    ending = {"votable": "vot"}.get(kind, kind)
+    response.headers["Content-Disposition"] = f"inline; filename={name}.{ending}"
+    return response
 
 
 def posted_json() -> Any:

@@ -190,7 +190,7 @@ class Ranking:
         }
 
     def table(self) -> "QTable":
-        """The calibrators as an astropy table with units."""
+        """The calibrators as an astropy table with units, which ECSV, FITS and VOTable files can hold."""
         from astropy import units
         from astropy.table import QTable
 
@@ -222,8 +222,8 @@ class Ranking:
                 "edition": self.edition,
                 "pinlight": self.pinlight,
                 "target": self.target.name,
-                "excluded": dict(self.excluded),
-                "notes": list(self.notes),
+                "excluded": " ".join(f"{reason}={count}" for reason, count in self.excluded.items()),
+                "notes": " ".join(self.notes),
             },
         )
 
