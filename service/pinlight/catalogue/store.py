@@ -36,6 +36,7 @@ from pinlight.catalogue.standings import (
 )
 from pinlight.catalogue.tables import (
     SCHEMA,
+    Change,
     Companion,
     Diameter,
     Edition,
@@ -170,6 +171,16 @@ class Catalogue:
         with self.reading() as connection:
             rows = connection.execute(query.order_by(Edition.made_utc.desc(), Edition.name)).mappings().all()
         return [dict(row) for row in rows]
+
+    def revision(self) -> str:
+        """A text that differs whenever an answer about the catalogue may: newest edition and change."""
+        query = select(
+            select(Edition.name).order_by(Edition.made_utc.desc(), Edition.name).limit(1).scalar_subquery(),
+            select(func.max(Change.id)).scalar_subquery(),
+        )
+        with self.reading() as connection:
+            edition, change = connection.execute(query).one()
+        return f"{edition}.{change}"
 
     def columns(self, edition: str | None = None) -> StarColumns:
         """The columns of an edition, by default the newest.

@@ -361,8 +361,17 @@ def _write(path: Path, text: str) -> None:
 @click.option("--arrays", type=click.Path(path_type=Path), help="A folder of array files to offer.")
 @click.option("--open", "open_reading", is_flag=True, help="Let anyone who reaches the address read.")
 @click.option("--members-only", is_flag=True, help="Reading needs a token here too, as behind a proxy.")
+@click.option(
+    "--access-log", type=click.Path(path_type=Path), help="Add a line of JSON a request to it; - is stderr."
+)
 def serve(
-    db: str | None, host: str, port: int, arrays: Path | None, open_reading: bool, members_only: bool
+    db: str | None,
+    host: str,
+    port: int,
+    arrays: Path | None,
+    open_reading: bool,
+    members_only: bool,
+    access_log: Path | None,
 ) -> None:
     """Serve the API and the page.
 
@@ -379,22 +388,26 @@ def serve(
     if closed and not has_members(catalogue):
         where = "others can reach" if not members_only else "is for members only"
         raise InputError(f"host is {host}, which {where}; add --open to let anyone there read, or a member")
-    _serve(catalogue, host, port, arrays, not closed)
+    _serve(catalogue, host, port, arrays, not closed, access_log)
 
 
-def _serve(catalogue: "Catalogue", host: str, port: int, arrays: Path | None, open_reading: bool) -> None:
-    import waitress
-
+def _serve(
+    catalogue: "Catalogue",
+    host: str,
+    port: int,
+    arrays: Path | None,
+    open_reading: bool,
+    access_log: Path | None = None,
+) -> None:
     from pinlight.faces.http import create_app
+    from pinlight.faces.serving import serve_app
 
     app = create_app(catalogue, arrays, open_reading=open_reading)
-    try:
-        server = waitress.create_server(app, host=host, port=port, threads=8, ident="pinlight")
-    except (OSError, ValueError) as error:
-        reason = f"cannot serve on {host} port {port}: {getattr(error, 'strerror', None) or error}"
-        raise InputError(f"{reason}; choose another --port") from error
-    click.echo(f"Pinlight is at http://{'[::1]' if host == '::1' else host}:{port}/ – Ctrl-C ends it", err=True)
-    server.run()
+
+    def ready(address: str) -> None:
+        click.echo(f"Pinlight is at {address} – Ctrl-C ends it", err=True)
+
+    serve_app(app, host, port, access_log=access_log, ready=ready)
 
 
 @main.command()

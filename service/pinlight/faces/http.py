@@ -1,5 +1,6 @@
 """The HTTP interface, a Flask application; every error is a problem detail."""
 
+import threading
 from collections.abc import Iterable
 from itertools import repeat
 from pathlib import Path
@@ -7,7 +8,7 @@ from typing import Any
 
 import numpy as np
 from flask import Blueprint, Flask, Response, current_app, json, request
-from werkzeug.exceptions import HTTPException, NotFound
+from werkzeug.exceptions import HTTPException, NotFound, ServiceUnavailable
 
 from pinlight.arrays.geometry import baselines
 from pinlight.catalogue.store import Catalogue
@@ -20,7 +21,7 @@ from pinlight.errors import (
     TokenError,
 )
 from pinlight.faces.access import challenge, check_access
-from pinlight.faces.frame import page_policy, prepare_templates, render_page
+from pinlight.faces.frame import prepare_templates, render_page
 from pinlight.faces.models import PlanQuestion, RankingQuestion, StarsQuestion
 from pinlight.faces.night import night
 from pinlight.faces.openapi import describe_api
@@ -37,6 +38,7 @@ from pinlight.faces.service import (
     read_question,
     service,
 )
+from pinlight.faces.serving import prepare_answers
 from pinlight.faces.setups import known_arrays
 from pinlight.faces.tables import stars_table, table_of
 from pinlight.faces.vo import vo
@@ -76,7 +78,8 @@ def create_app(catalogue: Catalogue, arrays_folder: Path | None = None, *, open_
     app.register_error_handler(PinlightError, _library_problem)
     app.register_error_handler(HTTPException, _http_problem)
     app.register_error_handler(Exception, _unforeseen_problem)
-    app.after_request(_headers)
+    app.extensions["pinlight_stopping"] = threading.Event()
+    prepare_answers(app)
     return app
 
 
@@ -100,20 +103,14 @@ def _library_problem(error: PinlightError) -> Response:
 
 def _http_problem(error: HTTPException) -> Response:
     response = _problem(error.code or 500, error.name, error.description or error.name)
-    response.headers.extend((key, value) for key, value in error.get_headers() if key == "Allow")
+    told = ("Allow", "Retry-After")
+    response.headers.extend((key, value) for key, value in error.get_headers() if key in told)
     return response
 
 
 def _unforeseen_problem(error: Exception) -> Response:
     current_app.logger.error("unforeseen error", exc_info=error)
     return _problem(500, "Error", "an error of Pinlight's own; the server's log has it")
-
-
-def _headers(response: Response) -> Response:
-    response.headers.setdefault("Content-Security-Policy", page_policy())
-    response.headers.setdefault("X-Content-Type-Options", "nosniff")
-    response.headers.setdefault("Referrer-Policy", "no-referrer")
-    return response
 
 
 @api.get("/rankings")
@@ -220,8 +217,17 @@ def arrays() -> dict[str, Any] | Response:
 
 @api.get("/health")
 def health() -> dict[str, Any]:
+    """Ready: the catalogue can be read, and the server is not about to stop."""
+    if current_app.extensions["pinlight_stopping"].is_set():
+        raise ServiceUnavailable("the server is stopping; ask another, or later", retry_after=5)
     columns = service().catalogue.columns()
     return {"status": "ok", "pinlight": __version__, "edition": columns.edition, "stars": len(columns)}
+
+
+@api.get("/health/live")
+def alive() -> dict[str, Any]:
+    """Alive: the process answers, whatever the catalogue does."""
+    return {"status": "alive", "pinlight": __version__}
 
 
 @api.get("/openapi.json")

@@ -5,6 +5,7 @@ from typing import Annotated, Any, Literal
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Discriminator, Field, Tag
 
 __all__ = [
+    "AliveAnswer",
     "ArraysAnswer",
     "ChangesAnswer",
     "ChangesQuestion",
@@ -516,6 +517,13 @@ class HealthAnswer(_Answer):
     pinlight: str
     edition: str
     stars: int
+
+
+class AliveAnswer(_Answer):
+    """The process answers."""
+
+    status: Literal["alive"]
+    pinlight: str
 
 
 class Problem(_Answer):

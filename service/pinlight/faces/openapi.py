@@ -6,6 +6,7 @@ from pydantic import BaseModel
 from pydantic.json_schema import models_json_schema
 
 from pinlight.faces.models import (
+    AliveAnswer,
     ArraysAnswer,
     ChangesAnswer,
     ChangesQuestion,
@@ -50,6 +51,7 @@ _ANSWERS = (
     ComparisonAnswer,
     ArraysAnswer,
     HealthAnswer,
+    AliveAnswer,
     Problem,
 )
 
@@ -249,10 +251,17 @@ def describe_api() -> dict[str, Any]:
                     "responses": _listed(_responses(ArraysAnswer, 400)),
                 }
             },
+            "/api/v1/health/live": {
+                "get": {
+                    "operationId": "alive",
+                    "summary": "Whether the process answers",
+                    "responses": _responses(AliveAnswer),
+                }
+            },
             "/api/v1/health": {
                 "get": {
                     "operationId": "health",
-                    "summary": "Whether the catalogue can be read",
+                    "summary": "Whether the server is ready: the catalogue can be read",
                     "responses": _responses(HealthAnswer),
                 }
             },
