@@ -2,7 +2,7 @@
 
 from pathlib import Path
 
-__all__ = ["migrations_folder", "seed_folder"]
+__all__ = ["measured_file", "migrations_folder", "seed_folder"]
 
 _PACKAGE = Path(__file__).parent
 
@@ -20,3 +20,9 @@ def migrations_folder() -> Path:
 def seed_folder() -> Path:
     """The folder of the seed catalogue, the invented arrays and the invented targets."""
     return _beside_or_inside("seed_catalog")
+
+
+def measured_file() -> Path:
+    """The file of stars with measured diameters."""
+    inside = _PACKAGE / "measured_diameters.csv"
+    return inside if inside.is_file() else _PACKAGE.parents[1] / "tests" / "data" / inside.name
