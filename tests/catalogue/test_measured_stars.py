@@ -20,6 +20,8 @@ def stars(catalogue):
     found = []
     with MEASURED.open(encoding="utf-8", newline="") as file:
         for star in csv.DictReader(file):
+            if star["kind"] != "published":
+                continue
             try:
                 row = row_of[catalogue.find(f"HIP {star['hip']}")]
             except LookupError:
@@ -36,8 +38,8 @@ def stars(catalogue):
 def test_saturated_stars_are_honest_in_the_sense_that_the_readme_states(stars):
     saturated = stars[~(stars[:, 0] >= 4.5)]
     match = re.search(
-        r"Of (\d+) measured stars there, (\d+) lie within one sigma and (\d+) within two, "
-        r"but their predictions come out (\d+) % too small",
+        r"Of (\d+) measured stars there, (\d+) lie within one sigma and (\d+) within two; "
+        r"their predictions come out (\d) % too small in the median",
         README,
     )
     assert match

@@ -6,6 +6,8 @@ import pytest
 
 from pinlight.diameters.atmosphere import (
     effective_temperature_k,
+    expected_v_ks,
+    gravity_from_radius,
     spectral_code_from_colour,
     surface_gravity,
 )
@@ -33,8 +35,8 @@ def test_temperatures_by_type_agree_with_measured_ones():
 
 def test_temperatures_by_colour_agree_with_measured_m_dwarfs():
     # Colours V - Ks of Mann et al. (2015), temperatures of von Braun et al. (2014).
-    cool = [row for row in rows() if row["K_2mass"]]
-    v_ks = np.array([float(row["V"]) - float(row["K_2mass"]) for row in cool])
+    cool = [row for row in rows() if row["K_good_system"] == "Ks"]
+    v_ks = np.array([float(row["V"]) - float(row["K_good"]) for row in cool])
     measured = np.array([float(row["teff_k"]) for row in cool])
     ours = effective_temperature_k(np.full(v_ks.size, np.nan), np.full(v_ks.size, "dwarf"), v_ks)
     assert len(cool) >= 5
@@ -67,3 +69,47 @@ def test_what_a_wrong_temperature_costs():
 
     for um, limit in ((2.19, 0.0015), (0.545, 0.0035)):
         assert abs(ratio(4400.0, um) - ratio(4250.0, um)) < limit
+
+
+def test_temperatures_of_giants_by_colour():
+    # HD 29139: V = 0.85, K = -2.85 (Johnson, memory), 3910 K from its measured diameter (Richichi &
+    # Roccatagliata 2005); and the table of giants by type, through their V - Ks.
+    ours = effective_temperature_k(NAN, GIANT, np.array([0.85 + 2.85 + 0.04]))[0]
+    assert ours == pytest.approx(3910, abs=80)
+    codes = np.array([48.0, 50.0, 52.0, 55.0])
+    group = np.full(4, "giant")
+    by_type = effective_temperature_k(codes, group, np.full(4, np.nan))
+    by_colour = effective_temperature_k(np.full(4, np.nan), group, expected_v_ks(codes, group))
+    np.testing.assert_allclose(by_colour, by_type, atol=150)
+
+
+def test_the_colours_of_types_are_those_of_the_seed():
+    # Bessell & Brett (1988) and Pecaut & Mamajek (2013), from memory, against medians of the seed's stars.
+    from pinlight.catalogue.seed import read_seed
+
+    seed = read_seed()
+    types = [parse_spectral_type(text) for text in seed.spectral_types]
+    codes, group = np.array([s.code for s in types]), np.array([s.group for s in types])
+    v_ks, near = seed.magnitudes[:, 1] - seed.magnitudes[:, 4], seed.parallax_mas > 5
+    for name, low, high in (
+        ("dwarf", 20, 22), ("dwarf", 30, 32), ("dwarf", 40, 42), ("dwarf", 50, 52), ("dwarf", 62, 64),
+        ("giant", 48, 50), ("giant", 50, 52), ("giant", 52, 54), ("giant", 54, 56),
+    ):  # fmt: skip
+        here = (group == name) & (codes >= low) & (codes < high) & (seed.magnitudes[:, 4] > 4) & near
+        off = v_ks[here] - expected_v_ks(codes[here], group[here])
+        assert np.nanmedian(off) == pytest.approx(0, abs=0.17)
+
+
+def test_gravity_from_a_radius():
+    # The Sun (exact: R = M = 1, log g = 4.438), and a red clump giant of 10.5 solar radii: Newton's law
+    # with 1.1 to 2.2 solar masses gives 2.44 to 2.74.
+    def logg(teff, radius, typical):
+        return gravity_from_radius(np.array([teff]), np.array([radius * 9.30093e-3]), np.array([typical]))[0]
+
+    assert logg(5772.0, 1.0, 4.4) == pytest.approx(4.438, abs=0.03)
+    assert 2.44 <= logg(4750.0, 10.5, 2.5) <= 2.74
+    # Torres et al. (2010) tell masses to 6 %, so the same from either guess.
+    assert logg(6000.0, 1.7, 3.9) == pytest.approx(logg(6000.0, 1.7, 4.4), abs=0.06)
+    # A radius that no star of that type has changes nothing.
+    assert logg(5772.0, 100.0, 4.4) == 4.4
+    assert np.isnan(logg(5772.0, 1.0, np.nan))

@@ -1,7 +1,12 @@
 import numpy as np
 import pytest
 
-from pinlight.diameters.spectral import luminosity_groups, parse_spectral_type, spectral_code
+from pinlight.diameters.spectral import (
+    LUMINOSITY_GROUPS,
+    luminosity_probabilities,
+    parse_spectral_type,
+    spectral_code,
+)
 from pinlight.errors import InputError
 
 
@@ -23,6 +28,11 @@ from pinlight.errors import InputError
         ("O9.7Ib", 9.7, "Ib"),
         ("K2+Vk:", 52, "V"),
         ("F2IV/V", 32, "IV"),
+        ("K5^+ III", 55, "III"),
+        ("M0^+ IIIa", 60, "III"),
+        ("K4^- III", 54, "III"),
+        ("K5-III", 55, "III"),
+        ("F0 V^+", 30, "V"),
     ],
 )
 def test_types_are_read_as_catalogues_write_them(text, code, luminosity):
@@ -62,29 +72,67 @@ def test_peculiarities_are_seen():
     assert not parse_spectral_type("F5Vmetalweak").emission
 
 
+def groups(stated, v_ks, absolute_ks, parallax=10.0):
+    absolute = np.asarray(absolute_ks, float)
+    ks = absolute - 5 * np.log10(parallax / 100)
+    found = luminosity_probabilities(np.array(stated), np.asarray(v_ks, float), ks, np.full(ks.shape, parallax))
+    np.testing.assert_allclose(found.sum(axis=1), 1.0)
+    return found
+
+
 def test_a_missing_class_is_told_from_parallax_and_colour():
     # A red clump giant and a dwarf of the same colour at their common absolute magnitudes
-    # (common practice, no source): K0 III M_K = -1.6, K0 V M_K = 4.0.
-    types = [parse_spectral_type("K0")] * 2
-    v_ks, parallax = np.array([2.2, 1.95]), np.array([10.0, 20.0])
-    ks = np.array([-1.6, 4.0]) - 5 * np.log10(parallax / 100)
-    assert list(luminosity_groups(types, v_ks, ks + v_ks, parallax)) == ["giant", "dwarf"]
+    # (common practice, no source): K0 III M_K = -1.6, K0 V M_K = 4.0; A0 V 0.5; M2 V 5.5.
+    found = groups([""] * 4, [2.2, 1.95, 0.0, 4.1], [-1.6, 4.0, 0.5, 5.5])
+    assert [LUMINOSITY_GROUPS[i] for i in found.argmax(axis=1)] == ["giant", "dwarf", "dwarf", "dwarf"]
+    assert found[0, 2] > 0.9
+    assert found[1, 0] > 0.8
+    assert found[3, 0] > 0.95
 
 
-def test_the_limits_between_dwarf_and_giant():
-    # Either side of absolute Ks 1.3 for a red star, of -1 for a blue one (common practice, no source).
-    types = [parse_spectral_type(text) for text in ("K0", "K0", "A0", "A0")]
-    v_ks, absolute = np.array([2.2, 2.2, 0.1, 0.1]), np.array([1.0, 1.6, -1.3, -0.7])
-    groups = luminosity_groups(types, v_ks, absolute + v_ks + 5, np.full(4, 10.0))
-    assert list(groups) == ["giant", "dwarf", "giant", "dwarf"]
+def test_between_dwarfs_and_giants_the_class_is_open():
+    # Red stars between the subgiants and the clump: no class has a probability above 0.6.
+    assert groups([""], [2.05], [0.25]).max() < 0.6
+    # Brighter is more probably a giant, all along.
+    rising = groups([""] * 9, [2.3] * 9, np.linspace(3.0, -2.5, 9))[:, 2]
+    assert (np.diff(rising) >= 0).all()
+
+
+def test_the_probabilities_are_those_of_the_seeds_classed_stars():
+    from pinlight.catalogue.seed import read_seed
+
+    seed = read_seed()
+    types = [parse_spectral_type(text) for text in seed.spectral_types]
+    stated = np.array([spectral.group for spectral in types])
+    v, ks = seed.magnitudes[:, 1], seed.magnitudes[:, 4]
+    classed = np.isin(stated, ("dwarf", "subgiant", "giant")) & (ks > 4.5) & np.isfinite(v - ks)
+    classed &= ~np.array([spectral.composite for spectral in types])
+    guessed = luminosity_probabilities(np.full(stated.size, ""), v - ks, ks, seed.parallax_mas)
+    for low, high in ((1.9, 2.2), (2.2, 2.6), (2.6, 3.2)):
+        for bright, faint in ((-2.0, -1.0), (-1.0, 0.0), (0.0, 1.0), (3.0, 6.0)):
+            absolute = ks + 5 * np.log10(seed.parallax_mas / 100)
+            here = classed & (v - ks >= low) & (v - ks < high) & (absolute >= bright) & (absolute < faint)
+            if here.sum() >= 100:
+                assert guessed[here, 2].mean() == pytest.approx(np.mean(stated[here] == "giant"), abs=0.08)
+
+
+def test_without_a_parallax_the_colour_alone_tells():
+    nan = np.array([np.nan])
+    red = luminosity_probabilities(np.array([""]), np.array([2.5]), np.array([5.0]), nan)[0]
+    blue = luminosity_probabilities(np.array([""]), np.array([1.0]), np.array([5.0]), nan)[0]
+    assert red[2] > 0.7
+    assert blue[0] > 0.7
+    nothing = luminosity_probabilities(np.array([""]), nan, nan, nan)[0]
+    assert list(nothing) == [1, 0, 0, 0]
 
 
 def test_a_stated_class_is_believed():
-    types = [parse_spectral_type(text) for text in ("K0III", "K0V", "F5Iab", "DA3", "G8IV", "K1II")]
-    nothing = np.full(6, np.nan)
-    assert list(luminosity_groups(types, nothing, nothing, nothing)) == [
-        "giant", "dwarf", "supergiant", "", "subgiant", "giant",
-    ]  # fmt: skip
+    types = [parse_spectral_type(text) for text in ("K0III", "K0V", "F5Iab", "G8IV", "K1II", "sdM1")]
+    stated = [spectral.group for spectral in types]
+    assert stated == ["giant", "dwarf", "supergiant", "subgiant", "giant", "dwarf"]
+    found = groups(stated, [2.0] * 6, [9.0, -9.0, 5.0, 0.0, 0.0, 0.0])
+    assert [LUMINOSITY_GROUPS[i] for i in found.argmax(axis=1)] == stated
+    assert (found.max(axis=1) == 1).all()
 
 
 def test_a_code_needs_a_temperature_class():

@@ -98,7 +98,12 @@ def test_a_diameter_from_the_command_line(run):
     answer = run(
         "diameter", "--V", 5.134, "--Ks", 2.654, "--Ks-error", 0.01, "--spectral-type", "K1III", "--json"
     )
-    assert json.loads(answer.stdout)["diameter"]["relations"] == ["A18_giant_VK", "P19_VK"]
+    assert json.loads(answer.stdout)["diameter"]["relations"] == [
+        "A18_giant_VK",
+        "P19_VK",
+        "N02_VK",
+        "DB05_VK",
+    ]
     shown = run("diameter", "--V", 5.134, "--Ks", 2.654, "--spectral-type", "K1III", "--band", "H")
     assert "uniform-disc diameter in H" in shown.stdout
 

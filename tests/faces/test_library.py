@@ -121,7 +121,12 @@ def test_a_diameter_from_magnitudes():
     assert diameter["limb_darkened_mas"] == pytest.approx(1.446, rel=0.02)
     assert 0.005 < diameter["error_mas"] / diameter["limb_darkened_mas"] < 0.015
     assert diameter["uniform_disk_mas"] < diameter["limb_darkened_mas"]
-    assert diameter["relations"] == ["A18_giant_VK", "P19_VK"]
+    assert diameter["relations"] == [
+        "A18_giant_VK",
+        "P19_VK",
+        "N02_VK",
+        "DB05_VK",
+    ]
     assert set(diameter) == {
         "limb_darkened_mas", "uniform_disk_mas", "band", "own_error_mas", "shared_error_mas", "error_mas",
         "relations", "discordant",
@@ -157,13 +162,14 @@ def test_an_extinction_map_of_ones_own_is_asked():
         ({"V": 5.0, "Ks": 3.0}, {"av_mag": -1.0}, "av_mag is -1"),
         ({"V": 5.0, "Ks": 3.0}, {"position_deg": (10.0, 95.0)}, "dec_deg is 95"),
         ({"V": 5.0, "Ks": 3.0}, {"band": "Q"}, "band is 'Q'"),
-        ({"V": 3.0, "Ks": 5.0}, {"spectral_type": "G2V"}, "no published relation applies to a dwarf"),
+        ({"V": 3.0, "Ks": 5.0}, {"spectral_type": "G2V"}, "no star is so blue: are the two swapped"),
+        ({"V": 9.0, "Ks": 5.0}, {"spectral_type": "G2V"}, "no published relation applies to a dwarf"),
         (
             {"V": 5.0, "Ks": 3.0},
             {"spectral_type": "DA3"},
             "no published relation applies to a star of this type",
         ),
-        ({"V": 5.0, "I": 4.0}, {}, "band I is not used by any relation yet"),
+        ({"V": 5.0, "W1": 4.0}, {}, "band is 'W1'; it may be one of B, V, J"),
     ],
 )
 def test_impossible_magnitudes_get_a_reason_not_a_number(magnitudes, options, message):

@@ -6,11 +6,11 @@ from pinlight.photometry.bands import BANDS, band, check_magnitude, default_erro
 
 
 def test_a_missing_error_is_never_zero_and_grows_where_2mass_saturates():
-    # 2MASS Explanatory Supplement 1.6b: bright stars good to 0.2-0.3 mag by profile wings, and
-    # the 51 ms frames saturate between magnitudes 4 and 5.
+    # 2MASS Explanatory Supplement 1.6b: the 51 ms frames saturate between magnitudes 4 and 5; beyond,
+    # its goal was 0.2-0.3 mag, and what was reached tests/photometry/test_saturation.py measures.
     for name, saturated, faint in (("J", 3.0, 7.0), ("H", 3.0, 7.0), ("Ks", 3.0, 7.0)):
         errors = default_errors(name, np.array([saturated, faint]))
-        assert errors[0] >= 0.15
+        assert errors[0] >= 0.1
         assert 0.01 < errors[1] < 0.05
     assert all(the_band.default_error_mag > 0 for the_band in BANDS.values())
 

@@ -1,7 +1,6 @@
 """Filling an empty catalogue from the seed: real stars, their names, magnitudes and neighbours."""
 
 import gzip
-import json
 import re
 from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
@@ -15,12 +14,13 @@ from sqlalchemy import insert
 from pinlight.catalogue.changes import Changing
 from pinlight.catalogue.database import bulk_insert
 from pinlight.catalogue.names import name_key, short_keys
+from pinlight.catalogue.recompute import diameter_rows
 from pinlight.catalogue.tables import Companion, Diameter, Identifier, Magnitude, Source, Star
-from pinlight.diameters.prediction import Diameters, StarPhotometry, predict_diameters
-from pinlight.diameters.relations import RelationSet, load_relations
+from pinlight.diameters.prediction import StarPhotometry, predict_diameters
+from pinlight.diameters.relations import load_relations
 from pinlight.diameters.spectral import parse_spectral_type
 from pinlight.errors import SeedFileError
-from pinlight.photometry.bands import default_errors, saturation_errors
+from pinlight.photometry.bands import default_errors
 from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.ranking.columns import FLAGS
 from pinlight.resources import seed_folder
@@ -175,7 +175,9 @@ def fill_from_seed(change: Changing, progress: Progress, path: Path | None = Non
     """
     progress("reading the seed")
     stars = read_seed(path)
-    errors = _by_band(default_errors, stars.magnitudes)
+    errors = np.stack(
+        [default_errors(band, stars.magnitudes[:, i]) for i, band in enumerate(CATALOGUE_BANDS)], axis=1
+    )
     connection = change.connection
     connection.execute(insert(Source), [STARS_SOURCE, NAMES_SOURCE])
 
@@ -188,30 +190,20 @@ def fill_from_seed(change: Changing, progress: Progress, path: Path | None = Non
     write(Magnitude, _magnitude_rows(stars, errors))
     write(Companion, _companion_rows(stars))
     progress("predicting diameters")
-    relation_set = load_relations()
     diameters = predict_diameters(
-        StarPhotometry(
-            magnitudes=stars.magnitudes,
-            errors=errors,
-            shared_errors=np.stack(
-                [saturation_errors(band, stars.magnitudes[:, i]) for i, band in enumerate(CATALOGUE_BANDS)],
-                axis=1,
-            ),
-            spectral_types=stars.spectral_types,
-            parallax_mas=stars.parallax_mas,
-            galactic_latitude_deg=galactic_latitude_deg(stars.ra_deg, stars.dec_deg),
+        StarPhotometry.of(
+            CATALOGUE_BANDS,
+            stars.magnitudes,
+            np.full(stars.magnitudes.shape, np.nan),  # the source gives none
+            stars.spectral_types,
+            stars.parallax_mas,
+            galactic_latitude_deg(stars.ra_deg, stars.dec_deg),
         ),
-        relation_set,
+        load_relations(),
     )
     progress("writing diameters")
-    write(Diameter, _diameter_rows(diameters, relation_set))
+    write(Diameter, diameter_rows(diameters, range(1, len(stars.names) + 1)))
     return len(stars.names)
-
-
-def _by_band(
-    function: Callable[[str, NDArray[np.float64]], NDArray[np.float64]], magnitudes: NDArray[np.float64]
-) -> NDArray[np.float64]:
-    return np.stack([function(band, magnitudes[:, i]) for i, band in enumerate(CATALOGUE_BANDS)], axis=1)
 
 
 def _or_none(values: NDArray[np.float64]) -> list[float | None]:
@@ -297,37 +289,4 @@ def _companion_rows(stars: SeedStars) -> Iterator[dict[str, Any]]:
             "delta_v_mag": deltas[0][index],
             "delta_ks_mag": deltas[1][index],
             "source_id": STARS_SOURCE["id"],
-        }
-
-
-def _diameter_rows(diameters: Diameters, relation_set: RelationSet) -> Iterator[dict[str, Any]]:
-    # Six digits after the point: the last bits of linear algebra differ between machines.
-    columns = {
-        name: _or_none(getattr(diameters, name).round(6))
-        for name in (
-            "limb_darkened_mas", "own_error_mas", "shared_error_mas", "chi_squared", "probability",
-            "av_mag", "av_error_mag", "spectral_code", "teff_k", "logg",
-        )
-    }  # fmt: skip
-    log_thetas, weights, pulls = (
-        array.round(4).tolist() for array in (diameters.log_thetas, diameters.weights, diameters.pulls)
-    )
-    freedoms, culprits = diameters.degrees_of_freedom.tolist(), diameters.culprit.tolist()
-    for row in range(len(freedoms)):
-        parts = {
-            name: [log_theta, weight, None if pull != pull else pull]
-            for name, log_theta, weight, pull in zip(
-                relation_set.names, log_thetas[row], weights[row], pulls[row], strict=True
-            )
-            if weight == weight
-        }
-        yield {
-            "star_id": row + 1,
-            **{name: values[row] for name, values in columns.items()},
-            "degrees_of_freedom": freedoms[row],
-            "discordant": bool(diameters.discordant[row]),
-            "culprit": relation_set.names[culprits[row]] if culprits[row] >= 0 else None,
-            "luminosity_group": str(diameters.luminosity_group[row]),
-            "relation_set": relation_set.hash,
-            "parts": json.dumps(parts, separators=(",", ":")),
         }

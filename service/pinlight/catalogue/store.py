@@ -1,6 +1,5 @@
 """The open catalogue: its editions, its stars and what is known of them."""
 
-import json
 import re
 from collections.abc import Iterable, Iterator, Sequence
 from contextlib import AbstractContextManager, contextmanager
@@ -26,6 +25,7 @@ from pinlight.catalogue.database import (
 from pinlight.catalogue.editions import open_edition, record_edition
 from pinlight.catalogue.members import Person, person_of
 from pinlight.catalogue.names import key_beginnings, name_key
+from pinlight.catalogue.recompute import explain_diameter
 from pinlight.catalogue.standings import (
     STANDINGS,
     must_exist,
@@ -426,32 +426,13 @@ class Catalogue:
             "companions": [
                 {**row, "name": neighbour_names.get(row["neighbour_id"])} for row in companions
             ],
-            "diameter": self._diameter_facts(diameter[0]) if diameter else None,
+            "diameter": explain_diameter(
+                diameter[0],
+                star["spectral_type"],
+                star["parallax_mas"],
+                {row["band"]: row["value"] for row in magnitudes},
+            ) if diameter else None,
             "standing": standings_for(standings).get(star_id),
             "standings": [public_standing(row) for row in standings],
             "source": sources[star["source_id"]].title,
-        }  # fmt: skip
-
-    @staticmethod
-    def _diameter_facts(row: dict[str, Any]) -> dict[str, Any] | None:
-        if row["limb_darkened_mas"] is None:
-            return None
-        theta = row["limb_darkened_mas"]
-        own, shared = row["own_error_mas"], row["shared_error_mas"]
-        return {
-            "limb_darkened_mas": theta,
-            "own_error_mas": own,
-            "shared_error_mas": shared,
-            "error_mas": round((own**2 + shared**2) ** 0.5, 6),
-            **{
-                key: row[key]
-                for key in (
-                    "chi_squared", "degrees_of_freedom", "probability", "discordant", "culprit", "av_mag",
-                    "av_error_mag", "luminosity_group", "teff_k", "logg", "relation_set",
-                )
-            },
-            "relations": [
-                {"relation": name, "diameter_mas": round(10**log_theta, 5), "weight": weight, "pull": pull}
-                for name, (log_theta, weight, pull) in json.loads(row["parts"]).items()
-            ],
         }  # fmt: skip

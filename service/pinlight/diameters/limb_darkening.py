@@ -8,10 +8,13 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from pinlight.photometry.bands import BANDS
+
 __all__ = [
     "LIMB_DARKENING_BANDS",
     "coefficients",
     "coefficients_at",
+    "uniform_disk_by_band",
     "uniform_disk_ratio",
 ]
 
@@ -114,3 +117,14 @@ def uniform_disk_ratio(u: ArrayLike) -> Floats:
     """
     u = np.asarray(u, dtype=np.float64)
     return np.sqrt((1 - 7 * u / 15) / (1 - u / 3))
+
+
+def uniform_disk_by_band(limb_darkened_mas: float, u: NDArray[np.floating[Any]]) -> dict[str, float]:
+    """The uniform-disc diameter of one star in each of the bands of a camera, `u` of shape (8,). [mas]"""
+    return {
+        name: round(
+            float(limb_darkened_mas * uniform_disk_ratio(coefficients_at(the_band.wavelength_um, u[None])[0])),
+            5,
+        )
+        for name, the_band in BANDS.items()
+    }

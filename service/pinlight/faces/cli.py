@@ -23,7 +23,10 @@ if TYPE_CHECKING:
 
 __all__ = ["main"]
 
-_BANDS = ("B", "V", "J", "H", "Ks")
+# The bands of photometry/systems.py; a test holds them together.
+_BANDS = (
+    "B", "V", "J", "H", "Ks", "R", "I", "J_BB", "H_BB", "K_BB", "L", "W3", "W4", "BT", "VT", "G", "BP", "RP",
+)  # fmt: skip
 
 # Heavy libraries are imported inside the commands: 'pinlight --help' has to answer at once.
 
@@ -160,10 +163,18 @@ def star(name: str, db: str | None, as_json: bool) -> None:
 
 def _magnitude_options(function: Callable[..., Any]) -> Callable[..., Any]:
     for band in reversed(_BANDS):
-        error_help = f"Error of {band}; the band's default if not given."
-        function = click.option(f"--{band}-error", f"{band}_error", type=float, help=error_help)(function)
-        function = click.option(f"--{band}", band, type=float, help=f"Magnitude in {band}.")(function)
+        name = band.replace("_", "-")
+        error_help = f"Error of {name}; the band's default if not given."
+        function = click.option(f"--{name}-error", f"{band}_error", type=float, help=error_help)(function)
+        function = click.option(f"--{name}", band, type=float, help=f"Magnitude in {name}.")(function)
     return function
+
+
+def _relations_file(function: Callable[..., Any]) -> Callable[..., Any]:
+    return click.option(
+        "--relations", "relations_file", type=click.Path(path_type=Path), metavar="FILE",
+        help="Relations of your own, a CSV file like relations.csv; a shipped one's name takes its place.",
+    )(function)  # fmt: skip
 
 
 @main.command()
@@ -178,17 +189,24 @@ def _magnitude_options(function: Callable[..., Any]) -> Callable[..., Any]:
 @click.option(
     "--from", "file", type=click.Path(path_type=Path), help="Stars of a CSV, ECSV, VOTable or FITS file."
 )
+@_relations_file
 @_as_json
-def diameter(file: Path | None, band: str, as_json: bool, **options: Any) -> None:
-    """A diameter from magnitudes, two bands or more, or the diameters of a table of stars."""
+def diameter(file: Path | None, band: str, relations_file: Path | None, as_json: bool, **options: Any) -> None:
+    """A diameter from magnitudes, two bands or more, or the diameters of a table of stars.
+
+    B V Johnson, R I Cousins, J H Ks 2MASS, J-BB H-BB K-BB Bessell & Brett, L Johnson, W3 W4 WISE,
+    BT VT Tycho-2, G BP RP Gaia. A magnitude without an error is taken to be the survey's.
+    """
+    from pinlight.diameters.relations import load_relations
     from pinlight.faces.diameter import StarRow, predict_diameter, predict_rows, read_stars
 
+    relations = load_relations(relations_file)
     given = {key: value for key, value in options.items() if value not in (None, "")}
     if file is not None:
         if given:
             raise InputError(f"from and {next(iter(given))} are both given; give one or the other")
         rows = read_stars(file)
-        found = iter(predict_rows([row for row in rows if isinstance(row, StarRow)], band))
+        found = iter(predict_rows([row for row in rows if isinstance(row, StarRow)], band, relations))
         answers = [
             next(found) if isinstance(row, StarRow) else {"name": row[0], "diameter": None, "reason": row[1]}
             for row in rows
@@ -200,7 +218,9 @@ def diameter(file: Path | None, band: str, as_json: bool, **options: Any) -> Non
         if (place[0] is None) != (place[1] is None):
             raise InputError(f"{'dec_deg' if place[1] is None else 'ra_deg'} is missing; give both or neither")
         position = None if place[0] is None else place
-        answers = [predict_diameter(magnitudes, errors, position_deg=position, band=band, **given)]
+        answers = [
+            predict_diameter(magnitudes, errors, position_deg=position, band=band, relations=relations, **given)
+        ]
     if as_json:
         _print_json(answers if file is not None else answers[0])
         return
@@ -210,6 +230,47 @@ def diameter(file: Path | None, band: str, as_json: bool, **options: Any) -> Non
         show_diameter(answers[0])
     else:
         show_diameters(answers)
+
+
+@main.group(invoke_without_command=True)
+@_relations_file
+@_as_json
+@click.pass_context
+def relations(context: click.Context, relations_file: Path | None, as_json: bool) -> None:
+    """List the surface-brightness–colour relations: those in use, and those only carried."""
+    if context.invoked_subcommand is not None:
+        return
+    from pinlight.diameters.relations import load_relations
+    from pinlight.faces.show import relation_facts, show_relations
+
+    relation_set = load_relations(relations_file)
+    if as_json:
+        _print_json(relation_facts(relation_set))
+    else:
+        show_relations(relation_facts(relation_set))
+
+
+@relations.command("check")
+@_relations_file
+@click.option("--measured", type=click.Path(path_type=Path), metavar="FILE", help="Measured stars of your own.")
+@_as_json
+def check_relations_(relations_file: Path | None, measured: Path | None, as_json: bool) -> None:
+    """Hold each relation against measured stars and the Sun: bias and spread by class and colour."""
+    from pinlight.diameters.relations import load_relations
+    from pinlight.diameters.validation import check_relations, read_measured
+    from pinlight.faces.show import show_relation_checks
+    from pinlight.resources import measured_file
+
+    relation_set = load_relations(relations_file)
+    answer = {
+        "relation_set": relation_set.hash,
+        "relations_file": relation_set.file or None,
+        "checks": check_relations(relation_set, read_measured(measured or measured_file())),
+    }
+    if as_json:
+        _print_json(answer)
+    else:
+        show_relation_checks(answer)
 
 
 @main.group()

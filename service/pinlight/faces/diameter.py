@@ -1,19 +1,20 @@
 """Diameters from magnitudes: of one star, or of a table of stars."""
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from pinlight.diameters.limb_darkening import coefficients_at, uniform_disk_ratio
+from pinlight.diameters.limb_darkening import uniform_disk_by_band
 from pinlight.diameters.prediction import Diameters, StarPhotometry, predict_diameters
-from pinlight.diameters.relations import load_relations
+from pinlight.diameters.relations import RelationSet, load_relations
+from pinlight.diameters.spectral import LUMINOSITY_GROUPS
 from pinlight.errors import InputError
 from pinlight.photometry.bands import band as band_of
-from pinlight.photometry.bands import check_magnitude, default_errors, saturation_errors
-from pinlight.photometry.systems import CATALOGUE_BANDS
+from pinlight.photometry.bands import check_magnitude
+from pinlight.photometry.systems import INPUT_BANDS
 from pinlight.sky.positions import check_position, galactic_latitude_deg
 
 __all__ = ["StarRow", "predict_diameter", "predict_rows", "read_stars"]
@@ -46,11 +47,9 @@ class StarRow:
 
     def __post_init__(self) -> None:
         for key, value in self.magnitudes.items():
+            if key not in INPUT_BANDS:
+                raise InputError(f"band is {key!r}; it may be one of {', '.join(INPUT_BANDS)}")
             check_magnitude(key, value)
-            if key not in CATALOGUE_BANDS:
-                raise InputError(
-                    f"band {key} is not used by any relation yet; give {', '.join(CATALOGUE_BANDS)}"
-                )
         for key, value in self.errors.items():
             if not 0 < value < 5:
                 raise InputError(f"{key}_error is {value:g}; it must be positive and below 5 mag")
@@ -77,18 +76,28 @@ class StarRow:
         return float(galactic_latitude_deg(self.ra_deg, self.dec_deg))
 
 
-def predict_rows(rows: Sequence[StarRow], band: str = "Ks") -> list[dict[str, Any]]:
+def predict_rows(
+    rows: Sequence[StarRow],
+    band: str = "Ks",
+    relations: RelationSet | None = None,
+    extinction_map: ExtinctionMap | None = None,
+) -> list[dict[str, Any]]:
     """Diameters of many stars at once, ready for JSON.
 
-    An error that is not given takes its band's default. Without a spectral type, parallax and
-    colour tell a dwarf from a giant. Without an extinction the prior is taken, or none where
-    there is no parallax.
+    A magnitude without an error is taken to be the survey's: it gets its band's default error, and
+    where 2MASS saturates the correction of its bias. Without a luminosity class, parallax and colour
+    tell a dwarf from a giant. Without an extinction the prior is taken, or none where there is no
+    parallax.
 
     Parameters
     ----------
     rows : sequence of StarRow
     band : str
         Where the uniform-disc diameter is wanted.
+    relations : RelationSet, optional
+        In place of those that Pinlight ships.
+    extinction_map : function of ra_deg, dec_deg, parallax_mas, optional
+        Gives A_V and its error where a star has none of its own, but a position and a parallax.
 
     Returns
     -------
@@ -98,55 +107,55 @@ def predict_rows(rows: Sequence[StarRow], band: str = "Ks") -> list[dict[str, An
     Raises
     ------
     InputError
-        If `band` is unknown.
+        If `band` is unknown, or the map gives an impossible extinction.
     """
-    wavelength_um = band_of(band).wavelength_um
+    band_of(band)
     if not rows:
         return []
+    if extinction_map is not None:
+        rows = [_with_map(row, extinction_map) for row in rows]
+    bands = tuple(key for key in INPUT_BANDS if any(key in row.magnitudes for row in rows))
 
     def column(values: list[float | None]) -> Any:
         return np.array([np.nan if value is None else value for value in values], dtype=float)
 
-    magnitudes = np.array([[row.magnitudes.get(key, np.nan) for key in CATALOGUE_BANDS] for row in rows])
-    own = np.array([[row.errors.get(key, np.nan) for key in CATALOGUE_BANDS] for row in rows])
-    assumed, saturated = (
-        np.stack([function(key, magnitudes[:, i]) for i, key in enumerate(CATALOGUE_BANDS)], axis=1)
-        for function in (default_errors, saturation_errors)
-    )
-    given = np.isfinite(own)
     # Without a distance the prior would put the star behind all the dust there is.
     av = [0.0 if row.av_mag is None and row.parallax_mas is None else row.av_mag for row in rows]
     result = predict_diameters(
-        StarPhotometry(
-            magnitudes=magnitudes,
-            errors=np.where(given, own, assumed),
-            # An error of one's own says that the photometry is not the saturated survey's.
-            shared_errors=np.where(given, 0.0, saturated),
-            spectral_types=[row.spectral_type for row in rows],
-            parallax_mas=column([row.parallax_mas for row in rows]),
-            galactic_latitude_deg=column([row.galactic_latitude_deg for row in rows]),
-            av_mag=column(av),
-            av_error_mag=column([row.av_error_mag for row in rows]),
+        StarPhotometry.of(
+            bands,
+            np.array([[row.magnitudes.get(key, np.nan) for key in bands] for row in rows]),
+            np.array([[row.errors.get(key, np.nan) for key in bands] for row in rows]),
+            [row.spectral_type for row in rows],
+            column([row.parallax_mas for row in rows]),
+            column([row.galactic_latitude_deg for row in rows]),
+            column(av),
+            column([row.av_error_mag for row in rows]),
         ),
-        load_relations(),
+        relations or load_relations(),
     )
-    ratio = uniform_disk_ratio(coefficients_at(wavelength_um, result.limb_darkening))
-    return [_answer(row, result, index, band, float(ratio[index])) for index, row in enumerate(rows)]
+    return [_answer(row, result, index, band) for index, row in enumerate(rows)]
 
 
-def _answer(row: StarRow, result: Diameters, index: int, band: str, ratio: float) -> dict[str, Any]:
-    theta = float(result.limb_darkened_mas[index])
-    group = str(result.luminosity_group[index])
-    if not np.isfinite(theta):
-        kind = group or "star of this type"
-        reason = f"no published relation applies to a {kind} with these colours"
+def _with_map(row: StarRow, extinction_map: ExtinctionMap) -> StarRow:
+    if row.av_mag is not None or row.ra_deg is None or row.dec_deg is None or row.parallax_mas is None:
+        return row
+    av_mag, av_error_mag = extinction_map(row.ra_deg, row.dec_deg, row.parallax_mas)
+    return replace(row, av_mag=float(av_mag), av_error_mag=float(av_error_mag))
+
+
+def _answer(row: StarRow, result: Diameters, index: int, band: str) -> dict[str, Any]:
+    reason = result.reason(index)
+    if reason is not None:
         return {"name": row.name, "diameter": None, "reason": reason}
+    theta = float(result.limb_darkened_mas[index])
+    disks = uniform_disk_by_band(theta, result.limb_darkening[index])
     used = result.relations_used(index)
-    return {
+    answer = {
         "name": row.name,
         "diameter": {
             "limb_darkened_mas": round(theta, 5),
-            "uniform_disk_mas": round(theta * ratio, 5),
+            "uniform_disk_mas": disks[band],
             "band": band,
             "own_error_mas": round(float(result.own_error_mas[index]), 5),
             "shared_error_mas": round(float(result.shared_error_mas[index]), 5),
@@ -154,21 +163,37 @@ def _answer(row: StarRow, result: Diameters, index: int, band: str, ratio: float
             "relations": used,
             "discordant": bool(result.discordant[index]),
         },
-        "luminosity_group": group,
+        "uniform_disk_mas_by_band": disks,
+        "chi_squared": round(float(result.chi_squared[index]), 3),
+        "degrees_of_freedom": int(result.degrees_of_freedom[index]),
+        "probability": round(float(result.probability[index]), 6),
+        "culprit": result.culprit_name(index),
+        "luminosity_group": str(result.luminosity_group[index]),
+        "luminosity_probabilities": {
+            name: round(float(value), 3)
+            for name, value in zip(LUMINOSITY_GROUPS, result.group_probabilities[index], strict=True)
+        },
         "av_mag": round(float(result.av_mag[index]), 4),
         "av_error_mag": round(float(result.av_error_mag[index]), 4),
-        "teff_k": round(float(result.teff_k[index])),
+        "teff_k": None if np.isnan(result.teff_k[index]) else round(float(result.teff_k[index])),
+        "logg": None if np.isnan(result.logg[index]) else round(float(result.logg[index]), 2),
         "relation_set": result.relation_set.hash,
-        "parts": [
-            {
-                "relation": relation,
-                "diameter_mas": round(float(10 ** result.log_thetas[index, place]), 5),
-                "weight": round(float(result.weights[index, place]), 4),
-            }
-            for place, relation in enumerate(result.relation_set.names)
-            if relation in used
-        ],
+        "relations_file": result.relation_set.file or None,
     }
+    parts = []
+    for place, relation in enumerate(result.relation_set.names):
+        if relation in used:
+            value, pull = float(10 ** result.log_thetas[index, place]), float(result.pulls[index, place])
+            parts.append(
+                {
+                    "relation": relation,
+                    "diameter_mas": round(value, 5),
+                    "weight": round(float(result.weights[index, place]), 4),
+                    "residual_percent": round(100 * (value / theta - 1), 2),
+                    "pull": None if np.isnan(pull) else round(pull, 2),
+                }
+            )
+    return answer | {"parts": parts}
 
 
 def predict_diameter(
@@ -183,6 +208,7 @@ def predict_diameter(
     extinction_map: ExtinctionMap | None = None,
     band: str = "Ks",
     name: str = "",
+    relations: RelationSet | None = None,
 ) -> dict[str, Any]:
     """A diameter from magnitudes, and how it came about, ready for JSON; see `predict_rows`.
 
@@ -198,6 +224,8 @@ def predict_diameter(
         given and position and parallax are.
     band : str
         Where the uniform-disc diameter is wanted.
+    relations : RelationSet, optional
+        Of `pinlight.load_relations`, in place of those that Pinlight ships.
 
     Raises
     ------
@@ -205,12 +233,10 @@ def predict_diameter(
         If fewer than two bands are given, a value is impossible, or no relation applies.
     """
     ra_deg, dec_deg = position_deg or (None, None)
-    if av_mag is None and extinction_map is not None and position_deg is not None and parallax_mas is not None:
-        av_mag, av_error_mag = extinction_map(*position_deg, parallax_mas)
     row = StarRow(
         magnitudes, errors or {}, name, spectral_type, parallax_mas, ra_deg, dec_deg, av_mag, av_error_mag
     )
-    [answer] = predict_rows([row], band)
+    [answer] = predict_rows([row], band, relations, extinction_map)
     if answer["diameter"] is None:
         raise InputError(answer["reason"])
     return answer
@@ -244,10 +270,10 @@ def read_stars(path: Path) -> list[StarRow | tuple[str, str]]:
     except Exception as error:  # astropy's readers raise whatever their parsers do
         reason = getattr(error, "strerror", None) or str(error).splitlines()[0][:120]
         raise InputError(f"cannot read {path} as {kind.rpartition('.')[2]}: {reason}") from error
-    bands = [name for name in table.colnames if name in CATALOGUE_BANDS]
+    bands = [name for name in table.colnames if name in INPUT_BANDS]
     if len(bands) < 2:
         found = ", ".join(table.colnames)[:80]
-        raise InputError(f"{path} has columns {found}; it needs two or more of {', '.join(CATALOGUE_BANDS)}")
+        raise InputError(f"{path} has columns {found}; it needs two or more of {', '.join(INPUT_BANDS)}")
     return [_row(dict(zip(table.colnames, values, strict=True)), bands) for values in table.iterrows()]
 
 

@@ -335,11 +335,13 @@ class RelationPart(_Answer):
     relation: str
     diameter_mas: float
     weight: float
+    residual_percent: float
     pull: float | None
 
 
 class StarDiameter(_Answer):
     limb_darkened_mas: float
+    uniform_disk_mas_by_band: dict[str, float] | None
     own_error_mas: float
     shared_error_mas: float
     error_mas: float
@@ -351,6 +353,7 @@ class StarDiameter(_Answer):
     av_mag: float
     av_error_mag: float
     luminosity_group: str
+    luminosity_probabilities: dict[str, float]
     teff_k: float | None
     logg: float | None
     relation_set: str

@@ -8,6 +8,7 @@ from rich.console import Console
 from rich.markup import escape
 from rich.table import Table
 
+from pinlight.diameters.relations import Relation, RelationSet
 from pinlight.planning.night import NightPlan
 from pinlight.ranking.budget import TERMS
 from pinlight.ranking.gates import REMARKS
@@ -15,7 +16,17 @@ from pinlight.ranking.result import Ranking
 from pinlight.sky.time import format_utc
 from pinlight.sky.windows import Window
 
-__all__ = ["show_diameter", "show_diameters", "show_plan", "show_ranking", "show_star", "show_track"]
+__all__ = [
+    "relation_facts",
+    "show_diameter",
+    "show_diameters",
+    "show_plan",
+    "show_ranking",
+    "show_relation_checks",
+    "show_relations",
+    "show_star",
+    "show_track",
+]
 
 _SHORT = {"diameter": "diam.", "brightness": "bright.", "companion": "comp."}
 _CAUTION = (
@@ -112,20 +123,40 @@ def show_star(facts: dict[str, Any]) -> None:
         return
     console.print()
     _diameter_line(console, diameter)
+    _disk_line(console, diameter["uniform_disk_mas_by_band"])
     console.print(
-        f"as a {diameter['luminosity_group']}, Teff {diameter['teff_k']:.0f} K, log g {diameter['logg']:.1f},"
+        f"as a {_group(diameter)}, Teff {diameter['teff_k']:.0f} K, log g {diameter['logg']:.1f},"
         f" A_V {diameter['av_mag']:.2f} ± {diameter['av_error_mag']:.2f};"
         f" chi2 {diameter['chi_squared']:.1f} on {diameter['degrees_of_freedom']}"
     )
     if diameter["discordant"]:
         console.print(f"[bold]discordant[/bold]: {diameter['culprit']} disagrees most")
+    _parts_table(console, diameter["relations"])
+
+
+def _parts_table(console: Console, parts: list[dict[str, Any]]) -> None:
+    """What each relation gives, weighs, and how far it lies from the mean and from the others."""
     table = Table(box=None, pad_edge=False, header_style="dim")
-    for heading in ("relation", "diameter mas", "weight", "pull"):
+    for heading in ("relation", "diameter mas", "weight", "residual %", "pull"):
         table.add_column(heading, justify="left" if heading == "relation" else "right")
-    for part in diameter["relations"]:
+    for part in parts:
         pull = "–" if part["pull"] is None else f"{part['pull']:+.2f}"
-        table.add_row(part["relation"], f"{part['diameter_mas']:.4f}", f"{part['weight']:+.3f}", pull)
+        table.add_row(
+            escape(part["relation"]), f"{part['diameter_mas']:.4f}", f"{part['weight']:+.3f}",
+            f"{part['residual_percent']:+.1f}", pull,
+        )  # fmt: skip
     console.print(table)
+
+
+def _disk_line(console: Console, disks: dict[str, float] | None) -> None:
+    if disks:
+        console.print("as a uniform disc: " + "  ".join(f"{band} {value:.4f}" for band, value in disks.items()))
+
+
+def _group(found: dict[str, Any]) -> str:
+    """The luminosity group, with its probability where the type does not state it."""
+    probability = found["luminosity_probabilities"][found["luminosity_group"]]
+    return found["luminosity_group"] + (f" (probability {probability:.2f})" if probability < 1 else "")
 
 
 def _diameter_line(console: Console, found: dict[str, Any]) -> None:
@@ -140,12 +171,22 @@ def show_diameter(answer: dict[str, Any]) -> None:
     result, console = answer["diameter"], _console()
     _diameter_line(console, result)
     console.print(f"uniform-disc diameter in {result['band']}: {result['uniform_disk_mas']:.4f} mas")
+    _disk_line(console, answer["uniform_disk_mas_by_band"])
     extinction = f"A_V {answer['av_mag']:.2f} ± {answer['av_error_mag']:.2f}"
-    console.print(f"as a {answer['luminosity_group']}, Teff {answer['teff_k']} K, {extinction}")
+    atmosphere = "".join(
+        f"{name} {answer[key]}{unit}, "
+        for name, key, unit in (("Teff", "teff_k", " K"), ("log g", "logg", ""))
+        if answer[key] is not None
+    )
+    console.print(
+        f"as a {_group(answer)}, {atmosphere}{extinction};"
+        f" chi2 {answer['chi_squared']:.1f} on {answer['degrees_of_freedom']}"
+    )
     if result["discordant"]:
-        console.print("[bold]discordant[/bold]: its colours disagree about its diameter")
-    for part in answer["parts"]:
-        console.print(f"  {part['relation']:<14}{part['diameter_mas']:8.4f} mas   weight {part['weight']:+.3f}")
+        console.print(f"[bold]discordant[/bold]: {answer['culprit']} disagrees most")
+    _parts_table(console, answer["parts"])
+    own = f" with those of {escape(answer['relations_file'])}" if answer["relations_file"] else ""
+    console.print(f"[dim]relation set {answer['relation_set']}{own}[/dim]")
 
 
 def show_diameters(answers: list[dict[str, Any]]) -> None:
@@ -165,6 +206,92 @@ def show_diameters(answers: list[dict[str, Any]]) -> None:
             f"{found['uniform_disk_mas']:.4f}", answer["luminosity_group"],
             remark + ", ".join(found["relations"]),
         )  # fmt: skip
+    console.print(table)
+
+
+def relation_facts(relation_set: RelationSet) -> dict[str, Any]:
+    """A relation set, ready for JSON."""
+
+    def facts(relation: Relation) -> dict[str, Any]:
+        return {
+            "relation": relation.name,
+            "active": relation.active,
+            "sample": relation.sample,
+            "reference": relation.reference,
+            "doi": relation.doi,
+            "luminosity": list(relation.luminosity),
+            "form": relation.form,
+            "zero_band": relation.zero_band,
+            "colour": [relation.bluer, relation.redder],
+            "coefficients": list(relation.coefficients),
+            "colour_min": relation.colour_min,
+            "colour_max": relation.colour_max,
+            "scatter_percent": relation.scatter_percent,
+            "common_percent": relation.common_percent,
+            "shared_percent": relation.shared_percent,
+            "origin": relation.origin,
+            "note": relation.note,
+        }
+
+    return {
+        "relation_set": relation_set.hash,
+        "relations_file": relation_set.file or None,
+        "relations": [facts(relation) for relation in (*relation_set.relations, *relation_set.carried)],
+    }
+
+
+def show_relations(answer: dict[str, Any]) -> None:
+    """The relations in use as a table, and what is only carried."""
+    console = _console()
+    own = f", with those of {escape(answer['relations_file'])}" if answer["relations_file"] else ""
+    console.print(f"relation set {answer['relation_set']}{own}")
+    table = Table(box=None, pad_edge=False, header_style="dim")
+    headings = ("relation", "colour", "range", "scatter %", "shared %", "origin", "for", "reference")
+    rows = [
+        (
+            escape(one["relation"]), " – ".join(one["colour"]),
+            f"{one['colour_min']:g} to {one['colour_max']:g}", f"{one['scatter_percent']:g}",
+            f"{one['shared_percent']:g}", one["origin"], ", ".join(one["luminosity"]),
+            escape(one["reference"]),
+        )
+        for one in answer["relations"]
+        if one["active"]
+    ]  # fmt: skip
+    for place, heading in enumerate(headings):  # only the last two fold on a narrow screen
+        width = None if place >= len(headings) - 2 else max(len(row[place]) for row in rows)
+        table.add_column(heading, justify="right" if heading.endswith("%") else "left", min_width=width)
+    for row in rows:
+        table.add_row(*row)
+    console.print(table)
+    carried: dict[str, list[str]] = {}
+    for one in answer["relations"]:
+        if not one["active"]:
+            carried.setdefault(one["note"], []).append(one["relation"])
+    for note, names in carried.items():
+        console.print(f"[dim]not used: {escape(', '.join(names))}: {escape(note)}[/dim]")
+
+
+def show_relation_checks(answer: dict[str, Any]) -> None:
+    """How each relation does on measured stars, a line a class and colour bin."""
+    console = _console()
+    own = f", with those of {escape(answer['relations_file'])}" if answer["relations_file"] else ""
+    console.print(f"relation set {answer['relation_set']}{own}: predicted less measured, per cent")
+    table = Table(box=None, pad_edge=False, header_style="dim")
+    for heading in ("relation", "published scatter", "class", "V - K", "stars", "bias", "spread"):
+        table.add_column(heading, justify="left" if heading in ("relation", "class", "V - K") else "right")
+    for check in answer["checks"]:
+        lines = [
+            (
+                found["group"], f"{found['v_k_min']:g} to {found['v_k_max']:g}", str(found["stars"]),
+                f"{found['bias_percent']:+.1f}",
+                "–" if found["spread_percent"] is None else f"{found['spread_percent']:.1f}",
+            )
+            for found in check["bins"]
+        ]  # fmt: skip
+        if check["sun_percent"] is not None:
+            lines.append(("the Sun", "1.5", "1", f"{check['sun_percent']:+.1f}", "–"))
+        for line in lines or [("–", "no measured star", "0", "–", "–")]:
+            table.add_row(escape(check["relation"]), f"{check['scatter_percent']:g}", *line)
     console.print(table)
 
 

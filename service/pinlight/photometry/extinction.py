@@ -5,7 +5,7 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from pinlight.photometry.bands import BANDS
+from pinlight.photometry.bands import PHOTOMETRY
 
 __all__ = ["extinction_prior", "relative_extinction"]
 
@@ -20,6 +20,9 @@ _SCALE_HEIGHT_KPC = 0.114
 _BUBBLE_KPC = 0.070
 
 
+_LAW_ENDS_UM = 3.3
+
+
 @lru_cache(maxsize=32)
 def relative_extinction(name: str) -> float:
     """A(band)/A_V at the band's effective wavelength, R_V = 3.1.
@@ -27,16 +30,17 @@ def relative_extinction(name: str) -> float:
     Notes
     -----
     Fitzpatrick, Massa, Gordon et al. (2019), ApJ 886, 108, as computed by the
-    `dust_extinction` library, normalised to 1 in V. System bands such as ``K_BB`` use the
-    band they are named after.
+    `dust_extinction` library, normalised to 1 in V. Beyond that law's end at 3.3 um the infrared
+    branch of Cardelli, Clayton & Mathis (1989), ApJ 345, 245: (0.574 - 0.527 / R_V) x^1.61, x = 1 /
+    wavelength; in W3 that leaves the silicates out, which matters little where A_V is small.
     """
+    wavelength_um = PHOTOMETRY[name].wavelength_um
+    if wavelength_um > _LAW_ENDS_UM:
+        return float((0.574 - 0.527 / 3.1) * wavelength_um**-1.61)
     from astropy import units  # slow to import
     from dust_extinction.parameter_averages import F19
 
-    law = F19(Rv=3.1)
-    base = {"J_BB": "J", "H_BB": "H", "K_BB": "Ks"}.get(name, name)
-    at = [BANDS[key].wavelength_um for key in (base, "V")] * units.um
-    in_band, in_v = law(at)
+    in_band, in_v = F19(Rv=3.1)([wavelength_um, PHOTOMETRY["V"].wavelength_um] * units.um)
     return float(in_band / in_v)
 
 
