@@ -26,6 +26,10 @@ PLAN = {
     "targets": [{"name": "T", "ra_deg": 20, "dec_deg": 20, "magnitudes": {"H": 4}}],
     "array": "north", "mode": "H", "from": "2026-12-01T20:00:00Z", "to": "2026-12-01T22:00:00Z", "time_limit_s": 1,
 }  # fmt: skip
+INTAKE = {
+    "table": "name,ra,dec,V,K\nHD 10700,26.017,-15.9375,3.5,1.68\nnew one,11.5,12.5,7.0,abc\n",
+    "source": "A list", "reference": "2020Ref",
+}  # fmt: skip
 # Every endpoint, an example of its question, and the least role that it takes to write.
 ENDPOINTS = [
     ("GET", "/api/v1/rankings", RANKING, None),
@@ -37,12 +41,14 @@ ENDPOINTS = [
     ("POST", "/api/v1/stars/1/standings", JUDGEMENT, "editor"),
     ("GET", "/api/v1/stars/1/changes", None, None),
     ("GET", "/api/v1/changes", None, None),
+    ("POST", "/api/v1/intakes", INTAKE, "editor"),
     ("GET", "/api/v1/editions", None, None),
     ("POST", "/api/v1/editions", None, "keeper"),
     ("GET", "/api/v1/editions/EDITION", None, None),
     ("GET", "/api/v1/editions/EDITION/comparison", None, None),
     ("GET", "/api/v1/arrays", None, None),
     ("GET", "/api/v1/health", None, None),
+    ("GET", "/api/v1/health/live", None, "nothing"),
     ("GET", "/api/v1/openapi.json", None, None),
 ]
 ROLES = ("reader", "editor", "keeper")
@@ -79,6 +85,8 @@ def ask(team, where, who, method, path, question=None):
 
 
 def expected(where, who, needs):
+    if needs == "nothing":
+        return 200
     if who == "revoked" or (who == "none" and (needs or where == "closed")):
         return 401
     if needs and ROLES.index(who) < ROLES.index(needs):
@@ -274,3 +282,72 @@ def test_serving_elsewhere_needs_members_or_an_open_door(path):
     assert "add --open to let anyone there read, or a member" in refused.stderr
     both = run("serve", "--open", "--members-only", "--db", path, code=2)
     assert "open and members-only are both given" in both.stderr
+
+
+TABLE = "name,ra,dec,V,K,e_K\nInvented 1,150.5,20.5,5.2,3.1,0.02\nInvented 2,151.5,95,5.2,3.1,0.02\n"
+
+
+def test_a_table_by_command(path, tmp_path):
+    file = tmp_path / "list.csv"
+    file.write_text(TABLE, encoding="utf-8")
+    add = ("add", str(file), "--source", "A list", "--reference", "2020Ref", "--db", path)
+    dry = run(*add, "--dry-run").stdout
+    assert "Ks                    from K [mag], by name" in dry
+    assert "line 3: refused: dec is 95" in dry
+    done = run(*add)
+    assert "2 rows: 1 stars added, 0 known, 1 refused" in done.stdout
+    assert (
+        (tmp_path / "list.csv.rejects.csv")
+        .read_text(encoding="utf-8")
+        .splitlines()[1]
+        .startswith("3,dec is 95")
+    )
+    assert "it was in already" in run(*add).stdout
+    assert json.loads(run(*add, "--json").stdout)["already"]
+    assert (
+        json.loads(run("star", "Invented 1", "--db", path, "--json").stdout)["diameter"]["limb_darkened_mas"]
+        > 0
+    )
+    first = json.loads(run("edition", "list", "--db", path, "--json").stdout)[0]["name"]
+    run("edition", "freeze", "--db", path)
+    assert "added: 1" in run("edition", "compare", first, "--db", path).stdout
+    ranked = json.loads(run("rank", "152 21", "--baseline-m", "100", "--wavelength-um", "2.2", "--db", path,
+                            "--json", "--separation-max-deg", "2").stdout)  # fmt: skip
+    assert "Invented 1" in [star["name"] for star in ranked["calibrators"]]
+
+
+@pytest.mark.parametrize(
+    ("more", "message"),
+    [
+        (("--map", "V"), "map is 'V'; write it as KEY=VALUE"),
+        (("--map", "V=V", "--map", "V=K"), "map has V twice"),
+        (("--zero-point", "V=x"), "zero-point is no number"),
+        (("--zero-point", "Q=3"), "zero-point has 'Q'"),
+        (("--epoch", "2"), "epoch is 2; write a year"),
+        (("--match-arcsec", "0"), "match_arcsec is 0; it must lie above 0"),
+        (("--source", " "), "source is empty"),
+    ],
+)
+def test_an_impossible_intake_is_refused(path, tmp_path, more, message):
+    file = tmp_path / "list.csv"
+    file.write_text(TABLE, encoding="utf-8")
+    refused = run("add", str(file), "--source", "A", "--reference", "B", *more, "--db", path, code=2)
+    assert message in refused.stderr
+    assert refused.stderr.count("\n") == 1
+
+
+def test_a_table_over_http(team):
+    question = {"table": TABLE, "source": "Posted", "reference": "2020Post"}
+    dry = ask(team, "open", "editor", "POST", "/api/v1/intakes", question | {"dry_run": True})
+    assert dry.status_code == 200
+    assert models.IntakeAnswer.model_validate(dry.json).preview["mapping"]["columns"]["V"]["column"] == "V"
+    done = ask(team, "open", "editor", "POST", "/api/v1/intakes", question)
+    assert done.status_code == 201
+    answer = models.IntakeAnswer.model_validate(done.json)
+    assert (answer.rows, answer.added, answer.rejected) == (2, 1, 1)
+    assert answer.rejects[0].reason == "dec is 95; it must lie between -90 and 90 deg"
+    again = ask(team, "open", "editor", "POST", "/api/v1/intakes", question)
+    assert (again.status_code, again.json["already"]) == (200, True)
+    bad = ask(team, "open", "editor", "POST", "/api/v1/intakes", question | {"table": "a,b\n1,2\n"})
+    assert bad.status_code == 400
+    assert "no column is ra_deg" in bad.json["detail"]

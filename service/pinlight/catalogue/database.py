@@ -2,7 +2,7 @@
 
 import os
 import re
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from itertools import islice
@@ -26,6 +26,7 @@ __all__ = [
     "place_of",
     "reading",
     "refuse_newer",
+    "rows_in",
     "schema_of",
     "set_counters",
     "snapshot",
@@ -35,6 +36,7 @@ __all__ = [
 _BUSY_S = 60
 _CONNECT_S = 10
 _CHUNK = 20_000
+_MOST_VALUES = 10_000
 # Any number will do, so long as nothing else in that database locks by it.
 _WRITER_LOCK = 0x50494E4C
 
@@ -224,6 +226,13 @@ def refuse_newer(schema: str, place: Place) -> None:
             f"catalogue {place} was made by a newer Pinlight (schema {schema}, this one knows {SCHEMA}); "
             "install that version"
         )
+
+
+def rows_in(connection: Connection, query: Any, column: Any, values: Sequence[Any]) -> Iterator[Any]:
+    """The rows of a query where a column is one of many values, asked for in portions."""
+    for start in range(0, len(values), _MOST_VALUES):
+        part = values[start : start + _MOST_VALUES]
+        yield from connection.execute(query.where(column.in_(part)))
 
 
 def bulk_insert(connection: Connection, table: type[Any], rows: Iterable[dict[str, Any]]) -> int:

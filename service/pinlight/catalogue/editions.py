@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from sqlalchemy import Connection, insert, select
 
 from pinlight.catalogue.changes import Changing
+from pinlight.catalogue.predicting import preferred
 from pinlight.catalogue.tables import Companion, Diameter, Edition, Magnitude, Star
 from pinlight.diameters.limb_darkening import coefficients
 from pinlight.diameters.oblateness import oblateness_bound
@@ -59,10 +60,10 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
     for band in CATALOGUE_BANDS:
         columns[f"magnitude_{band}"] = np.full(count, np.nan, dtype=np.float32)
         columns[f"magnitude_error_{band}"] = np.full(count, np.nan, dtype=np.float32)
-    magnitudes = select(Magnitude.star_id, Magnitude.band, Magnitude.value, Magnitude.error)
-    for star_id, band, value, error in connection.execute(magnitudes):
-        columns[f"magnitude_{band}"][place[star_id]] = value
-        columns[f"magnitude_error_{band}"][place[star_id]] = error
+    for (star_id, band), row in preferred(connection.execute(select(Magnitude.__table__))).items():
+        if band in CATALOGUE_BANDS:
+            columns[f"magnitude_{band}"][place[star_id]] = row.value
+            columns[f"magnitude_error_{band}"][place[star_id]] = row.error
 
     diameter = select(
         Diameter.star_id, Diameter.limb_darkened_mas, Diameter.own_error_mas, Diameter.shared_error_mas,

@@ -14,6 +14,7 @@ from sqlalchemy import insert
 from pinlight.catalogue.changes import Changing
 from pinlight.catalogue.database import bulk_insert
 from pinlight.catalogue.names import name_key, short_keys
+from pinlight.catalogue.predicting import NEIGHBOUR_ARCSEC, or_none
 from pinlight.catalogue.recompute import diameter_rows
 from pinlight.catalogue.tables import Companion, Diameter, Identifier, Magnitude, Source, Star
 from pinlight.diameters.prediction import StarPhotometry, predict_diameters
@@ -45,7 +46,6 @@ NAMES_SOURCE = {
     "licence": "BSD-3-Clause",
     "retrieved": "2020-03-15",
 }
-NEIGHBOUR_ARCSEC = 60.0
 # R to Z, RR to QZ, V335 and on: Kholopov et al., General Catalogue of Variable Stars, 4th ed.
 _VARIABLE_DESIGNATION = re.compile(r"([R-Z]|[A-Z]{2}|V\d{3,4}) [A-Z][A-Za-z]{2}")
 
@@ -206,13 +206,9 @@ def fill_from_seed(change: Changing, progress: Progress, path: Path | None = Non
     return len(stars.names)
 
 
-def _or_none(values: NDArray[np.float64]) -> list[float | None]:
-    return [None if value != value else value for value in values.tolist()]  # NaN is not itself
-
-
 def _star_rows(stars: SeedStars) -> Iterator[dict[str, Any]]:
     optional = [
-        _or_none(values.round(6))
+        or_none(values.round(6))
         for values in (stars.pm_ra_mas_yr, stars.pm_dec_mas_yr, stars.parallax_mas, stars.radial_velocity_km_s)
     ]
     cells = cells_of(stars.ra_deg, stars.dec_deg).tolist()
@@ -252,7 +248,7 @@ def _identifier_rows(stars: SeedStars) -> Iterator[dict[str, Any]]:
 
 def _magnitude_rows(stars: SeedStars, errors: NDArray[np.float64]) -> Iterator[dict[str, Any]]:
     for index, band in enumerate(CATALOGUE_BANDS):
-        values, errors_mag = _or_none(stars.magnitudes[:, index]), errors[:, index].tolist()
+        values, errors_mag = or_none(stars.magnitudes[:, index]), errors[:, index].tolist()
         for row, value in enumerate(values):
             if value is not None:
                 yield {
@@ -262,6 +258,8 @@ def _magnitude_rows(stars: SeedStars, errors: NDArray[np.float64]) -> Iterator[d
                     "value": value,
                     "error": errors_mag[row],
                     "error_assumed": True,
+                    "quality": "",
+                    "chosen": False,
                 }
 
 
@@ -278,7 +276,7 @@ def _companion_rows(stars: SeedStars) -> Iterator[dict[str, Any]]:
     one, other = pairs.T
     apart = separation_deg(stars.ra_deg[one], stars.dec_deg[one], stars.ra_deg[other], stars.dec_deg[other])
     deltas = [
-        _or_none((stars.magnitudes[other, column] - stars.magnitudes[one, column]).round(3))
+        or_none((stars.magnitudes[other, column] - stars.magnitudes[one, column]).round(3))
         for column in (CATALOGUE_BANDS.index("V"), CATALOGUE_BANDS.index("Ks"))
     ]
     for index, arcsec in enumerate((apart * 3600).round(3).tolist()):

@@ -25,6 +25,7 @@ from pinlight.catalogue.database import (
 from pinlight.catalogue.editions import open_edition, record_edition
 from pinlight.catalogue.members import Person, person_of
 from pinlight.catalogue.names import key_beginnings, name_key
+from pinlight.catalogue.predicting import preferred
 from pinlight.catalogue.recompute import explain_diameter
 from pinlight.catalogue.standings import (
     STANDINGS,
@@ -391,7 +392,8 @@ class Catalogue:
                 raise NotFoundError(f"star_id is {star_id}; there is no such star")
             sources = {row.id: row for row in connection.execute(select(Source.__table__))}
             names = rows(Identifier.name, Identifier.short, table=Identifier, order=Identifier.id)
-            magnitudes = rows(Magnitude.__table__, table=Magnitude)
+            query = select(Magnitude.__table__).where(Magnitude.star_id == star_id)
+            magnitudes = connection.execute(query.order_by(Magnitude.source_id)).all()
             companions = rows(
                 Companion.neighbour_id, Companion.separation_arcsec, Companion.delta_v_mag,
                 Companion.delta_ks_mag, table=Companion, order=Companion.separation_arcsec,
@@ -402,6 +404,17 @@ class Catalogue:
             named = connection.execute(select(Star.id, Star.name).where(Star.id.in_(neighbours)))
             neighbour_names = {row.id: row.name for row in named}
         identifiers = dict.fromkeys(row["name"] for row in names if not row["short"])
+        counting = {band: row for (_, band), row in preferred(magnitudes).items()}
+
+        def shown(row: Any) -> dict[str, Any]:
+            return {
+                **{key: getattr(row, key) for key in ("value", "error", "error_assumed", "quality", "chosen")},
+                "source": sources[row.source_id].title,
+            }
+
+        def others(band: str, best: Any) -> list[dict[str, Any]]:
+            return [shown(row) for row in magnitudes if row.band == band and row is not best]
+
         return {
             "star_id": star["id"],
             "name": star["name"],
@@ -415,13 +428,8 @@ class Catalogue:
             },
             "flags": star["flags"].split(),
             "magnitudes": {
-                row["band"]: {
-                    "value": row["value"],
-                    "error": row["error"],
-                    "error_assumed": row["error_assumed"],
-                    "source": sources[row["source_id"]].title,
-                }
-                for row in sorted(magnitudes, key=lambda row: "BVRIJHKs".find(row["band"]))
+                band: shown(row) | {"others": others(band, row)}
+                for band, row in sorted(counting.items(), key=lambda pair: "BVRIJHKs".find(pair[0]))
             },
             "companions": [
                 {**row, "name": neighbour_names.get(row["neighbour_id"])} for row in companions
@@ -430,7 +438,7 @@ class Catalogue:
                 diameter[0],
                 star["spectral_type"],
                 star["parallax_mas"],
-                {row["band"]: row["value"] for row in magnitudes},
+                {band: row.value for band, row in counting.items()},
             ) if diameter else None,
             "standing": standings_for(standings).get(star_id),
             "standings": [public_standing(row) for row in standings],

@@ -12,15 +12,17 @@ __all__ = [
     "Diameter",
     "Edition",
     "Identifier",
+    "Intake",
     "Magnitude",
     "Member",
+    "Reject",
     "Source",
     "Standing",
     "Star",
 ]
 
 # The newest migration; a test holds it against the migrations folder.
-SCHEMA = "0002"
+SCHEMA = "0003"
 
 
 class Base(DeclarativeBase):
@@ -129,7 +131,11 @@ class Identifier(Base):
 
 
 class Magnitude(Base):
-    """A star's magnitude in one band from one source; `error_assumed` where the source gave no error."""
+    """A star's magnitude in one band from one source; `error_assumed` where the source gave no error.
+
+    `quality` is the source's own letter, '' where it gives none; `chosen` where a keeper has
+    preferred this source to what the rules say.
+    """
 
     __tablename__ = "magnitude"
 
@@ -139,6 +145,8 @@ class Magnitude(Base):
     value: Mapped[float]
     error: Mapped[float]
     error_assumed: Mapped[bool]
+    quality: Mapped[str]
+    chosen: Mapped[bool]
     change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
 
 
@@ -203,6 +211,40 @@ class Standing(Base):
     made_by: Mapped[str]
     made_utc: Mapped[str]
     change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
+
+
+class Intake(Base):
+    """One table taken in, batch by batch; `key` is the hash of its content and of how it was read.
+
+    `rows_done` rows are in the catalogue or in the rejects; `finished_utc` is None until all are.
+    """
+
+    __tablename__ = "intake"
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    key: Mapped[str] = mapped_column(unique=True)
+    file: Mapped[str]
+    mapping: Mapped[str]
+    source_id: Mapped[int] = mapped_column(ForeignKey("source.id"))
+    rows_done: Mapped[int]
+    added: Mapped[int]
+    matched: Mapped[int]
+    rejected: Mapped[int]
+    started_utc: Mapped[str]
+    finished_utc: Mapped[str | None]
+
+
+class Reject(Base):
+    """A row that an intake refused: its line in the file, why, and what it held as JSON."""
+
+    __tablename__ = "reject"
+    __table_args__ = (Index(None, "intake_id"),)
+
+    id: Mapped[int] = mapped_column(primary_key=True)
+    intake_id: Mapped[int] = mapped_column(ForeignKey("intake.id"))
+    line: Mapped[int]
+    reason: Mapped[str]
+    content: Mapped[str]
 
 
 class Edition(Base):

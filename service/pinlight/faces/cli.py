@@ -11,6 +11,7 @@ import click
 
 from pinlight.errors import InputError, NotFoundError, PinlightError
 from pinlight.faces import team
+from pinlight.faces.add import add
 from pinlight.faces.options import as_json as _as_json
 from pinlight.faces.options import db as _db
 from pinlight.faces.options import print_json as _print_json
@@ -77,7 +78,7 @@ def main() -> None:
     """
 
 
-for _command in (team.member, team.standing, team.edition, team.changes):
+for _command in (add, team.member, team.standing, team.edition, team.changes):
     main.add_command(_command)
 
 

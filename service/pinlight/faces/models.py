@@ -15,6 +15,8 @@ __all__ = [
     "EditionCheck",
     "EditionsAnswer",
     "HealthAnswer",
+    "IntakeAnswer",
+    "IntakeQuestion",
     "PlanAnswer",
     "PlanQuestion",
     "Problem",
@@ -133,6 +135,21 @@ class StandingQuestion(_Question):
     evidence: Annotated[list[str | dict[str, Any]], Field(max_length=100)] = Field(default_factory=list)
 
 
+class IntakeQuestion(_Question):
+    """A small table of stars, as text; columns are found as `pinlight add` finds them."""
+
+    table: Annotated[str, Field(min_length=1)]
+    format: Literal["csv", "ecsv", "votable"] = "csv"
+    source: str
+    reference: str
+    licence: str = ""
+    map: dict[str, str] = Field(default_factory=dict)
+    epoch: float = 2000.0
+    zero_points_jy: dict[str, float] = Field(default_factory=dict)
+    match_arcsec: float = 1.5
+    dry_run: bool = False
+
+
 class ChangesQuestion(_Question):
     """How many changes, or at what time a star is wanted."""
 
@@ -152,9 +169,19 @@ class Measured(_Answer):
     error: float
 
 
-class StarMagnitude(Measured):
+class SourcedMagnitude(Measured):
+    """A magnitude of one source; `quality` is the source's letter, `chosen` a keeper's choice."""
+
     error_assumed: bool
+    quality: str
+    chosen: bool
     source: str
+
+
+class StarMagnitude(SourcedMagnitude):
+    """The magnitude that counts in a band, and those of other sources."""
+
+    others: list[SourcedMagnitude]
 
 
 class DiameterAnswer(_Answer):
@@ -426,6 +453,25 @@ class StarChangesAnswer(_Answer):
     star_id: int
     changes: list[ChangeRecord] | None = None
     then: StarThen | None = None
+
+
+class RejectedRow(_Answer):
+    line: int
+    reason: str
+    names: str
+
+
+class IntakeAnswer(_Answer):
+    """What came of an intake; with `dry_run` what would be read, in `preview`."""
+
+    intake_id: int | None = None
+    rows: int
+    added: int = 0
+    matched: int = 0
+    rejected: int = 0
+    already: bool = False
+    rejects: list[RejectedRow] = Field(default_factory=list)
+    preview: dict[str, Any] | None = None
 
 
 class EditionAnswer(_Answer):

@@ -16,6 +16,8 @@ from pinlight.faces.models import (
     EditionCheck,
     EditionsAnswer,
     HealthAnswer,
+    IntakeAnswer,
+    IntakeQuestion,
     PlanAnswer,
     PlanQuestion,
     Problem,
@@ -35,7 +37,7 @@ from pinlight.version import __version__
 
 __all__ = ["describe_api"]
 
-_QUESTIONS = (RankingQuestion, PlanQuestion, StarsQuestion, TargetQuestion, StandingQuestion)
+_QUESTIONS = (RankingQuestion, PlanQuestion, StarsQuestion, TargetQuestion, StandingQuestion, IntakeQuestion)
 _ANSWERS = (
     RankingAnswer,
     PlanAnswer,
@@ -49,6 +51,7 @@ _ANSWERS = (
     EditionsAnswer,
     EditionCheck,
     ComparisonAnswer,
+    IntakeAnswer,
     ArraysAnswer,
     HealthAnswer,
     AliveAnswer,
@@ -241,6 +244,17 @@ def describe_api() -> dict[str, Any]:
                     "summary": "What differs between two editions",
                     "parameters": [name, *_parameters(ComparisonQuestion)],
                     "responses": _responses(ComparisonAnswer, 400, 404),
+                }
+            },
+            "/api/v1/intakes": {
+                "post": {
+                    "operationId": "takeIn",
+                    "summary": "Take in a small table of stars; takes an editor",
+                    "requestBody": {
+                        "required": True,
+                        "content": {"application/json": {"schema": _schema(IntakeQuestion)}},
+                    },
+                    "responses": _responses(IntakeAnswer, 400, 403, 413, 415, done="201"),
                 }
             },
             "/api/v1/arrays": {

@@ -1,11 +1,14 @@
 """The team's records over HTTP: standings, the change log, editions."""
 
+import tempfile
+from pathlib import Path
 from typing import Any
 
 from flask import Blueprint, Response, request
 
+from pinlight.catalogue.intake import IntakeOptions, preview_file, rejected_rows, take_in
 from pinlight.faces.access import acting_catalogue
-from pinlight.faces.models import ChangesQuestion, ComparisonQuestion, StandingQuestion
+from pinlight.faces.models import ChangesQuestion, ComparisonQuestion, IntakeQuestion, StandingQuestion
 from pinlight.faces.service import as_asked, from_query, posted_json, read_question, service
 from pinlight.faces.tables import table_of
 
@@ -40,6 +43,32 @@ def star_changes(star_id: int) -> dict[str, Any]:
     asked = read_question(ChangesQuestion, from_query(request.args))
     found = service().catalogue.changes(star_id, asked.at)
     return {"star_id": star_id, "changes": found} if asked.at is None else {"star_id": star_id, "then": found}
+
+
+@records.post("/intakes")
+def take_in_table() -> tuple[dict[str, Any], int]:
+    catalogue = acting_catalogue()
+    catalogue.person().require("editor", "take in a table")
+    asked = read_question(IntakeQuestion, posted_json())
+    options = IntakeOptions(
+        asked.source,
+        asked.reference,
+        asked.licence,
+        columns=asked.map,
+        epoch_yr=asked.epoch,
+        zero_points_jy=asked.zero_points_jy,
+        match_arcsec=asked.match_arcsec,
+    )
+    with tempfile.TemporaryDirectory() as folder:
+        path = Path(folder) / f"posted.{'vot' if asked.format == 'votable' else asked.format}"
+        path.write_text(asked.table, encoding="utf-8")
+        if asked.dry_run:
+            preview = preview_file(path, options) | {"file": "posted"}
+            return {"rows": len(preview["rows"]), "preview": preview}, 200
+        report = take_in(catalogue, path, options)
+    answer = report.to_dict()
+    del answer["source"], answer["resumed_at"]
+    return answer | {"rejects": rejected_rows(catalogue, report.intake_id)}, 200 if report.already else 201
 
 
 @records.get("/editions")
