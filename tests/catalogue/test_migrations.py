@@ -1,11 +1,19 @@
 import json
+import os
+import random
+import signal
+import sqlite3
+import subprocess
+import sys
+import time
+from pathlib import Path
 
 import pytest
 from alembic import command
 from alembic.script import ScriptDirectory
 from sqlalchemy import create_engine, inspect, text
 
-from pinlight.catalogue.database import set_counters
+from pinlight.catalogue.database import engine_of, place_of, set_counters
 from pinlight.catalogue.making import make_catalogue
 from pinlight.catalogue.schema import alembic_config, downgrade, upgrade
 from pinlight.catalogue.store import open_catalogue
@@ -139,3 +147,59 @@ def test_a_catalogue_of_the_first_schema_opens_at_the_newest(empty_url):
     assert [change["change_id"] for change in catalogue.changes(2)] == [1, 2, 3, 4]
     assert catalogue.standings() == {2: "vouched"}
     catalogue.close()
+
+
+MIGRATE = """
+import sys
+from pinlight.catalogue.making import make_catalogue
+print("go", flush=True)
+make_catalogue(sys.argv[1]).close()
+print("done", flush=True)
+"""
+
+
+def test_a_migration_killed_at_any_moment_is_whole_or_not_there(seeded_path, tmp_path):
+    """SIGKILL in the middle of bringing the seed from the first schema up; 100 with PINLIGHT_TEST_SLOW."""
+    old = tmp_path / "old.db"
+    old.write_bytes(seeded_path.read_bytes())
+    engine = engine_of(place_of(str(old)), foreign_keys=False)
+    with engine.begin() as connection:
+        downgrade(connection, "0001")
+        tables = [table for table in Base.metadata.tables if inspect(connection).has_table(table)]
+        counts = {table: connection.execute(text(f"SELECT count(*) FROM {table}")).scalar() for table in tables}
+    engine.dispose()
+    assert counts["star"] > 70_000
+    environment = os.environ | {
+        "PYTHONPATH": str(Path(__file__).parents[2] / "service"), "PINLIGHT_EDITIONS": f"{seeded_path}.editions",
+    }  # fmt: skip
+    moments, kills, through = random.Random(5), 0, 0
+    while kills < (100 if "PINLIGHT_TEST_SLOW" in os.environ else 2):
+        path = tmp_path / "p.db"
+        for left in tmp_path.glob("p.db*"):
+            left.unlink()
+        path.write_bytes(old.read_bytes())
+        process = subprocess.Popen(
+            [sys.executable, "-c", MIGRATE, str(path)], env=environment, stdout=subprocess.PIPE, text=True
+        )
+        assert process.stdout is not None
+        assert process.stdout.readline() == "go\n"
+        time.sleep(moments.uniform(0.2, 4.0))
+        process.send_signal(signal.SIGKILL)
+        through += process.stdout.read() == "done\n"
+        process.wait()
+        process.stdout.close()
+        kills += process.returncode == -signal.SIGKILL
+        connection = sqlite3.connect(path)
+        assert connection.execute("PRAGMA integrity_check").fetchone() == ("ok",)
+        assert connection.execute("PRAGMA foreign_key_check").fetchall() == []
+        schema = connection.execute("SELECT version_num FROM alembic_version").fetchone()[0]
+        assert schema in ("0001", SCHEMA)
+        for table, count in counts.items():
+            assert connection.execute(f"SELECT count(*) FROM {table}").fetchone() == (count,)
+        connection.close()
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setenv("PINLIGHT_EDITIONS", f"{seeded_path}.editions")
+        make_catalogue(str(path)).close()
+        catalogue = open_catalogue(str(path))
+        assert len(catalogue.columns()) == counts["star"]
+        catalogue.close()

@@ -351,3 +351,10 @@ def test_a_table_over_http(team):
     bad = ask(team, "open", "editor", "POST", "/api/v1/intakes", question | {"table": "a,b\n1,2\n"})
     assert bad.status_code == 400
     assert "no column is ra_deg" in bad.json["detail"]
+
+
+def test_a_copy_by_command(path, tmp_path):
+    out = run("copy", path, str(tmp_path / "copy.db")).stdout
+    assert out == "copied 74733 stars, 1 changes, 1 editions\n"
+    assert run("edition", "check", "--db", str(tmp_path / "copy.db")).stdout.endswith("as its hash says\n")
+    assert "name another place" in run("copy", path, path, code=2).stderr

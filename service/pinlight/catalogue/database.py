@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import Any
 from urllib.parse import quote
 
-from sqlalchemy import Connection, Engine, Table, create_engine, event, insert, inspect, text
+from sqlalchemy import Connection, Engine, FromClause, create_engine, event, insert, inspect, text
 from sqlalchemy.engine import URL, make_url
 from sqlalchemy.exc import ArgumentError, DBAPIError, SQLAlchemyError
 
@@ -235,7 +235,7 @@ def rows_in(connection: Connection, query: Any, column: Any, values: Sequence[An
         yield from connection.execute(query.where(column.in_(part)))
 
 
-def bulk_insert(connection: Connection, table: type[Any], rows: Iterable[dict[str, Any]]) -> int:
+def bulk_insert(connection: Connection, table: type[Any] | FromClause, rows: Iterable[dict[str, Any]]) -> int:
     """Insert many rows, all with the same keys, in chunks, as fast as the database takes them.
 
     Returns
@@ -243,7 +243,7 @@ def bulk_insert(connection: Connection, table: type[Any], rows: Iterable[dict[st
     count : int
         How many.
     """
-    target: Table = table.__table__
+    target: Any = table if isinstance(table, FromClause) else table.__table__
     iterator, count = iter(rows), 0
     statement: Any = None
     while chunk := list(islice(iterator, _CHUNK)):

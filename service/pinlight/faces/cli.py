@@ -78,7 +78,7 @@ def main() -> None:
     """
 
 
-for _command in (add, team.member, team.standing, team.edition, team.changes):
+for _command in (add, team.member, team.standing, team.edition, team.changes, team.copy):
     main.add_command(_command)
 
 

@@ -6,9 +6,9 @@ from typing import Any
 import click
 
 from pinlight.errors import InputError
-from pinlight.faces.options import as_json, db, print_json, token
+from pinlight.faces.options import as_json, db, print_json, say, token
 
-__all__ = ["changes", "edition", "member", "standing"]
+__all__ = ["changes", "copy", "edition", "member", "standing"]
 
 
 @click.group()
@@ -277,6 +277,24 @@ def check_edition(name: str | None, db: str | None, as_json: bool) -> None:
             click.echo(f"{row['name']}  {'as its hash says' if row['sound'] else row['problem']}")
     if not all(row["sound"] for row in rows):
         raise click.exceptions.Exit(1)
+
+
+@click.command()
+@click.argument("source", metavar="FROM")
+@click.argument("target", metavar="TO")
+@as_json
+def copy(source: str, target: str, as_json: bool) -> None:
+    """Copy the whole catalogue at FROM to TO, between files and servers either way.
+
+    Nothing is left out: ids, the change log, members and editions come along.
+    """
+    from pinlight.catalogue.copying import copy_catalogue
+
+    counts = copy_catalogue(source, target, say)
+    if as_json:
+        print_json(counts)
+    else:
+        click.echo(f"copied {counts['star']} stars, {counts['change']} changes, {counts['edition']} editions")
 
 
 @click.command()
