@@ -132,6 +132,16 @@ def test_an_impossible_table_is_named(tmp_path, north):
     with pytest.raises(InputError, match=r"puts the array 5e\+06 km from the Earth's centre"):
         array_file_from_oifits(changed(oifits(tmp_path / "far.fits", north), "OI_ARRAY", far))
 
+    def below(table):
+        table.data["EFF_WAVE"][0] = -1e-6
+
+    text = array_file_from_oifits(changed(oifits(tmp_path / "below.fits", north), "OI_WAVELENGTH", below))
+    assert 'wavelength_um = "?"' in text
+    with fits.open(oifits(tmp_path / "full.fits", north)) as file:
+        file["OI_WAVELENGTH"].data = file["OI_WAVELENGTH"].data[:0]
+        file.writeto(tmp_path / "none.fits")
+    assert "channels = 0" not in array_file_from_oifits(tmp_path / "none.fits")
+
     def twice(table):
         table.data["STA_NAME"][1] = table.data["STA_NAME"][0]
 

@@ -406,18 +406,44 @@ def test_hour_angles_are_positive_in_the_west(north):
             assert (after["altitude_deg"] < at["altitude_deg"]) == (at["hour_angle_h"] > 0)
 
 
-def test_a_mast_too_thin_for_the_grid_still_splits_a_window(north):
-    # 0.4 deg wide: the star passes it in less than the five minutes between a ranking's times.
-    mast = [(0, 0), (275.95, 0), (276.0, 70), (276.4, 70), (276.45, 0), (360, 0)]
-    stations = [s.model_copy(update={"horizon": tuple(mast), "cart_m": 300.0}) for s in north.station[:2]]
+def test_thin_masts_split_windows_and_steer_the_choice_of_settings(north):
+    # Half a degree wide: the star passes each in some three minutes.
+    masts = [(0.0, 0.0), (360.0, 0.0)]
+    for azimuth in (70, 76, 82, 88, 94, 268, 273, 278, 283):
+        masts += [(azimuth - 0.26, 0.0), (azimuth - 0.25, 60.0), (azimuth + 0.25, 60.0), (azimuth + 0.26, 0.0)]
+    stations = [s.model_copy(update={"horizon": tuple(sorted(masts))}) for s in north.station[:3]]
     array = at_site(north, 38.0, 15.0, stations)
     clock = night_clock(array, array.station, "2026-12-01")
     reach = reach_of_target(clock, Target(60.0, 30.0))
-    dense = np.arange(clock.times[0], clock.times[-1], 2 / 86_400)
-    up = clock.observable(*reach.place, dense)
-    assert len(runs(up)) == len(reach.target_windows) == 2
-    gap = (reach.target_windows[1][0] - reach.target_windows[0][1]) * 1440
-    assert 1 < gap < 5
+    dense = np.arange(clock.times[0], clock.times[-1], 5 / 86_400)
+    up, delays = clock.observable(*reach.place, dense), clock.delays_m(*reach.place, dense)
+    assert len(runs(up)) >= 7
+    lengths = {
+        k: max(
+            (last - first for first, last in runs(up & clock.delay_lines.with_settings(k, delays))), default=0
+        )
+        for k in product(*map(range, sizes(clock.delay_lines)))
+    }
+    ours = max(end - start for start, end in reach.target_windows) * 1440
+    assert ours >= max(lengths.values()) * 5 / 60 - 2
+    holds = up & clock.delay_lines.with_settings(reach.settings, delays)
+    assert len(reach.target_windows) == len([1 for first, last in runs(holds) if last > first])
+    assert sum(end - start for start, end in reach.target_windows) * 86_400 == pytest.approx(
+        holds.sum() * 5, abs=15 * len(reach.target_windows)
+    )
+
+
+def test_what_blocks_a_star_is_named(north):
+    wall = [(0, 0), (89, 0), (90, 50), (180, 50), (181, 0)]
+    stations = [north.station[0].model_copy(update={"horizon": tuple(wall)}), north.station[1]]
+    array = at_site(north, 38.0, 15.0, stations)
+    told = track(night_clock(array, array.station, "2026-12-01"), Target(60.0, 10.0), 10.0)["times"]
+    for at in told:
+        assert ("altitude" in at["blocked_by"]) == (at["altitude_deg"] < array.limits.altitude_min_deg)
+        behind = 91 < at["azimuth_deg"] < 179 and at["altitude_deg"] < 49.9
+        assert ("horizon of Ash" in at["blocked_by"]) or not behind
+        assert ("horizon of Ash" not in at["blocked_by"]) or at["altitude_deg"] < 50.1
+    assert {"altitude", "horizon of Ash"} <= {word for at in told for word in at["blocked_by"]}
 
 
 def test_daylight_is_not_blamed_on_the_delay_lines(north):
@@ -426,6 +452,7 @@ def test_daylight_is_not_blamed_on_the_delay_lines(north):
     assert told["windows"] == []
     assert told["coarse_paths_m"] is None
     assert all("sun" in at["blocked_by"] for at in told["times"])
-    ever = clock.delay_lines.settings_for(*(2 * [reach_of_target(clock, Target(220.0, 30.0)).delays_m]))[1]
+    delays = clock.delays_m(*clock.apparent(220.0, 30.0), clock.times)
+    ever = clock.delay_lines.settings_for(delays, delays)[1]
     blamed = ["delay lines at every coarse setting" in at["blocked_by"] for at in told["times"]]
-    assert blamed == [not one for one in ever[::2]]
+    assert blamed == [not one for one in ever]

@@ -114,11 +114,13 @@ _MODE_BLANKS = (
 
 def _mode(header: dict[str, Any], data: Any) -> list[str]:
     waves, widths = (np.asarray(data[key], dtype=float) * 1e6 for key in ("EFF_WAVE", "EFF_BAND"))
-    middle = float(waves.mean())
+    if not len(waves) or not (np.isfinite(waves) & (waves > widths / 2)).all():
+        keys = ("band", "wavelength_um", "bandwidth_um", "channels", *_MODE_BLANKS)
+        return [f"name = {_text(header.get('INSNAME') or 'mode')}", *(f"{key} = {_BLANK}" for key in keys)]
     low, high = (waves - widths / 2).min(), (waves + widths / 2).max()
     return [
         f"name = {_text(header.get('INSNAME') or 'mode')}",
-        f"band = {_text(nearest_band(middle, ('B', 'V', 'J', 'H', 'Ks'))) if np.isfinite(middle) else _BLANK}",
+        f"band = {_text(nearest_band(float(waves.mean()), ('B', 'V', 'J', 'H', 'Ks')))}",
         f"wavelength_um = {_number((low + high) / 2, 5)}",
         f"bandwidth_um = {_number(high - low, 5)}",
         f"channels = {len(waves)}",

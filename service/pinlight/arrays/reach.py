@@ -153,42 +153,43 @@ class DelayLines:
         Returns
         -------
         Longest
-            No settings serve for longer: every length is tried at every start, by halving, since a stretch
-            that can be served can be served in part.
+            No settings serve for longer: a length is tried at every start, and lengths are halved in on,
+            since a stretch that can be served can be served in part.
         """
-        blocks, times = allowed.shape
-        lows, highs, alloweds = [low_m], [high_m], [allowed]  # over 1, 2, 4, ... steps from each
-        while 2 ** len(lows) <= times and alloweds[-1].any():
+        blocks = len(allowed)
+        lows, highs = [low_m], [high_m]  # over 1, 2, 4, ... times from each
+        runs_to = _run_lengths(allowed)  # how many allowed times begin with each
+        length, most = np.zeros(blocks, dtype=np.int64), runs_to.max(axis=1, initial=0)
+        while 2 ** len(lows) <= most.max(initial=0):
             half = 2 ** (len(lows) - 1)
             lows.append(np.minimum(lows[-1][..., :-half], lows[-1][..., half:]))
             highs.append(np.maximum(highs[-1][..., :-half], highs[-1][..., half:]))
-            alloweds.append(alloweds[-1][..., :-half] & alloweds[-1][..., half:])
-        length = np.zeros(blocks, dtype=np.int64)
         first = np.zeros(blocks, dtype=np.int64)
         settings = np.zeros((len(self.stations), blocks), dtype=np.int64)
-        block, start = np.nonzero(allowed)  # the stretches that may still grow, and what they span
-        low = np.full((len(self.pairs), len(block)), np.inf)
-        high = -low
-        for level in reversed(range(len(lows))):
-            begin = start + length[block]
-            fits = begin < alloweds[level].shape[1]
-            fits[fits] = alloweds[level][block[fits], begin[fits]]
+        block, start = np.nonzero(allowed)  # the starts that may still be good
+        while (length < most).any():
+            tried = (length + most + 1) // 2
+            fits = (runs_to[block, start] >= tried[block]) & (length < most)[block]
             some = np.flatnonzero(fits)
-            at = (slice(None), block[some], begin[some])
-            longer_low = np.minimum(low[:, some], lows[level][at])
-            longer_high = np.maximum(high[:, some], highs[level][at])
-            found, served = self.settings_for(longer_low, longer_high)
-            grown = np.unique(block[some[served]])
-            if not len(grown):
-                continue
+            low = np.empty((len(self.pairs), len(some)))
+            high = np.empty_like(low)
+            level = np.log2(np.maximum(tried, 1)).astype(np.int64)[block[some]]
+            for one in np.unique(level):  # two overlapping powers of two cover a stretch
+                where = np.flatnonzero(level == one)
+                who, begin = block[some[where]], start[some[where]]
+                end = begin + tried[who] - 2**one
+                low[:, where] = np.minimum(lows[one][:, who, begin], lows[one][:, who, end])
+                high[:, where] = np.maximum(highs[one][:, who, begin], highs[one][:, who, end])
+            found, served = self.settings_for(low, high)
             good = some[served]
-            earliest, where = np.unique(block[good], return_index=True)
-            settings[:, earliest], first[earliest] = found[:, served][:, where], start[good[where]]
-            low[:, good], high[:, good] = longer_low[:, served], longer_high[:, served]
-            length[grown] += 2**level
+            grown, place = np.unique(block[good], return_index=True)
+            settings[:, grown], first[grown] = found[:, served][:, place], start[good[place]]
+            shrunk = np.setdiff1d(np.flatnonzero(length < most), grown)
+            length[grown] = tried[grown]
+            most[shrunk] = tried[shrunk] - 1
             keep = ~np.isin(block, grown)
             keep[good] = True
-            block, start, low, high = block[keep], start[keep], low[:, keep], high[:, keep]
+            block, start = block[keep], start[keep]
         return Longest(settings.T, first, length)
 
     def shortfall(self, low_m: Floats, high_m: Floats) -> PairFailure:
@@ -224,3 +225,17 @@ class DelayLines:
 def coarse_paths_m(stations: tuple[Station, ...], settings: tuple[int, ...]) -> dict[str, float]:
     """The coarse path of each station, by its name."""
     return {s.name: s.coarse_paths_m[setting] for s, setting in zip(stations, settings, strict=True)}
+
+
+def _run_lengths(holds: Bools) -> Ints:
+    """How many True follow one another from each place on, shape of `holds`.
+
+    >>> _run_lengths(np.array([[True, True, False, True]]))
+    array([[2, 1, 0, 1]])
+    """
+    lengths = np.zeros(holds.shape, dtype=np.int64)
+    count = np.zeros(len(holds), dtype=np.int64)
+    for place in reversed(range(holds.shape[1])):
+        count = (count + 1) * holds[:, place]
+        lengths[:, place] = count
+    return lengths

@@ -233,6 +233,7 @@ class CalibratorAnswer(_Answer):
     calibration_error_percent: float | None
     standing: Literal["vouched", "unproven", "doubted", "barred"] | None
     window_utc: list[Window] | None
+    coarse_paths_m: dict[str, float] | None
 
 
 class TargetAnswer(_Answer):
@@ -284,6 +285,8 @@ class SetAnswer(_Answer):
     size: int
     star_ids: list[int]
     calibration_error_percent: float | None
+    window_utc: list[Window] | None
+    coarse_paths_m: dict[str, float] | None
 
 
 class LookAnswer(Window):

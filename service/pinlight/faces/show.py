@@ -57,8 +57,12 @@ def show_ranking(ranking: Ranking, most: int | None = None) -> None:
     headings = ["", "star", "error %", *term_headings, "sep deg", "type", setup.band, "diameter mas"]
     if ranking.span is not None:
         headings.append("UTC")
-        hours = _hours(ranking.target_windows)
-        console.print(f"in reach {hours} UTC in one coarse setting, from {format_utc(ranking.span[0])}")
+        hours = (
+            f"{_hours(ranking.target_windows)} UTC in one coarse setting"
+            if ranking.target_windows
+            else "at no time"
+        )
+        console.print(f"in reach {hours}, from {format_utc(ranking.span[0])}")
     for heading in headings:
         left = heading in ("star", "type", "mostly")
         bold = "bold" if heading == "error %" else ""

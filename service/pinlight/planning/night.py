@@ -1,6 +1,7 @@
 """A night of blocks: which targets, when, with which calibrators and coarse delay settings."""
 
-from collections.abc import Mapping, Sequence
+from collections import Counter
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from itertools import pairwise
 from typing import Any
@@ -18,7 +19,7 @@ from pinlight.ranking.budget import TERMS, error_budget, fixed_terms
 from pinlight.ranking.clock import Clock
 from pinlight.ranking.columns import StarColumns
 from pinlight.ranking.rank import rank
-from pinlight.ranking.result import CalibratorSet
+from pinlight.ranking.result import Ranking
 from pinlight.ranking.setup import Setup
 from pinlight.ranking.target import Target
 from pinlight.sky.time import format_utc, next_minute
@@ -33,13 +34,14 @@ _MINUTE_DAY = 1 / 1440
 # Blocks start on whole minutes of UTC: on every fifth, and on the first and last possible ones.
 _EVERY_MIN = 5
 _MOMENTS = 13
+_LISTED = 20  # stars of which any may be a block's only calibrator
 
 
 @dataclass(frozen=True)
 class Request:
     """A target that a night is wanted for.
 
-    `priority` 1 counts most; a block's worth is one over it. `repeats` is how many blocks are wanted.
+    A block's worth is one over `priority`; 1 is the usual. `repeats` is how many blocks are wanted.
     `required_error` is relative; `earliest` and `latest` bound the block in time (mjd_tai).
     """
 
@@ -195,6 +197,11 @@ def plan_night(
     """
     if not requests:
         raise InputError("targets is empty; a plan needs at least one")
+    names = Counter(request.target.name for request in requests)
+    if twice := next((name for name, count in names.items() if count > 1), None):
+        raise InputError(f"targets has {twice} twice; give it once, and repeats for more blocks")
+    if names[""] > 1:
+        raise InputError(f"targets has {names['']} without a name; a plan of several tells them apart by it")
     if setup.mode is None or setup.drift is None or setup.look_interval_min is None:
         raise InputError("array is missing; a plan needs an array and a mode")
     if not 0 < time_limit_s <= 3600:
@@ -258,7 +265,9 @@ def _notes(requests: Sequence[Request], setup: Setup, blocks: Sequence[Block], c
         names = ", ".join(blind)
         notes.append(f"Without a {setup.band} magnitude the brightness term is left out: {names}.")
     changes = any(one.coarse_paths_m != following.coarse_paths_m for one, following in pairwise(blocks))
-    if changes and not change_min:
+    if change_min:
+        notes.append(f"After each block {change_min:g} min are kept free for changing coarse delay settings.")
+    elif changes:
         notes.append(
             "No time is kept for changing coarse delay settings between blocks;"
             " give the array coarse_change_min for it."
@@ -281,7 +290,12 @@ def _prepare(
     standings: Mapping[int, str],
 ) -> _Prepared:
     """Calibrators, sequence and possible starts of one request."""
-    ranking = rank(stars, request.target, setup, clock=clock, standings=standings, best=10)
+    when = _clock_of(request, clock)
+    if when is None:
+        return _Prepared(
+            request, np.empty(0, dtype=np.int64), None, {}, "its from and to lie outside the night"
+        )
+    ranking = rank(stars, request.target, setup, clock=when, standings=standings, best=_LISTED)
 
     def nothing(reason: str) -> _Prepared:
         return _Prepared(request, np.empty(0, dtype=np.int64), None, {}, reason)
@@ -293,9 +307,7 @@ def _prepare(
         return nothing("no star passes every gate as its calibrator")
     start, end = max(ranking.target_windows, key=lambda window: window[1] - window[0])
     shortest, best = np.inf, np.inf
-    # The largest set first; a smaller one may be in reach for longer.
-    for chosen in reversed(ranking.best_sets):
-        pool = _rows_of(stars, chosen)
+    for pool in _pools(stars, ranking):
         for sequence in _sequences(stars, pool, setup, request, minutes, (start + end) / 2):
             starts = _possible_starts(stars, request, setup, minutes, pool, sequence)
             if not starts:
@@ -337,10 +349,28 @@ def _sequences(
     return [one for one in reversed(sequences) if one.minutes <= favourite.minutes]
 
 
-def _rows_of(stars: StarColumns, chosen: CalibratorSet) -> NDArray[np.int64]:
-    """Rows of the edition, in the order of the set."""
-    rows = np.flatnonzero(np.isin(stars.ids, list(chosen.star_ids)))
-    return rows[np.argsort([chosen.star_ids.index(int(star_id)) for star_id in stars.ids[rows]])]
+def _clock_of(request: Request, clock: Clock) -> Clock | None:
+    """The clock between a request's from and to; None if nothing is left of it."""
+    times = clock.times
+    earliest = times[0] if request.earliest is None else max(request.earliest, times[0])
+    latest = times[-1] if request.latest is None else min(request.latest, times[-1])
+    if earliest >= latest:
+        return None
+    if earliest == times[0] and latest == times[-1]:
+        return clock
+    inside = times[(times > earliest) & (times < latest)]
+    return replace(clock, times=np.array([earliest, *inside, latest]))
+
+
+def _pools(stars: StarColumns, ranking: Ranking) -> Iterator[NDArray[np.int64]]:
+    """Rows of the calibrators to choose a block's from, the pools to be tried in turn.
+
+    The largest best set first; a smaller one may be in reach for longer, and in the end one star alone.
+    """
+    sets = [one.star_ids for one in reversed(ranking.best_sets)]
+    for star_ids in [*sets, *((star.star_id,) for star in ranking.calibrators)]:
+        rows = np.flatnonzero(np.isin(stars.ids, list(star_ids)))
+        yield rows[np.argsort([star_ids.index(int(star_id)) for star_id in stars.ids[rows]])]
 
 
 def _drift(setup: Setup) -> tuple[float, float, float]:

@@ -27,9 +27,10 @@ Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
 _MINUTE_DAY = 1 / 1440
-_STEP_MIN = 5.0  # what a ranking and the choice of coarse settings look at
+# What a ranking looks at first, and what windows and the choice of coarse settings are made of. With a
+# horizon above the altitude limit both are the last: a mast may hide a star for a few minutes only.
+_STEP_MIN, _FINE_STEP_MIN, _WALLED_STEP_MIN = 10.0, 3.0, 1.0
 _MOST_STEPS = 20_000
-_FINE_STEP_MIN = 1.0  # what windows are made of before their edges are found
 _LONGEST_SPAN_DAY = 2.0
 
 
@@ -64,8 +65,9 @@ class Clock:
 
     @cached_property
     def fine_times(self) -> Floats:
-        """Times of the same span a minute apart."""
-        return _even_times(float(self.times[0]), float(self.times[-1]), _FINE_STEP_MIN)
+        """Times of the same span, three minutes apart or one."""
+        step_min = _WALLED_STEP_MIN if _walled(self.array, self.stations) else _FINE_STEP_MIN
+        return _even_times(float(self.times[0]), float(self.times[-1]), step_min)
 
     def every(self, step_min: float) -> Floats:
         """Times of the same span, a step apart from its start, and its end.
@@ -172,8 +174,7 @@ class Clock:
         lowest = self.array.limits.altitude_min_deg
         height = np.sin(latitude) * np.sin(d) + np.cos(latitude) * np.cos(d) * np.cos(h)
         holds = height >= np.sin(np.radians(lowest))
-        walled = [s for s in self.stations if max((top for _, top in s.horizon), default=0.0) > lowest]
-        if walled:
+        if walled := _walled(self.array, self.stations):
             altitude, azimuth = altitude_azimuth_deg(hour_angle, dec_deg, self.site.latitude_deg)
             for station in walled:
                 holds &= altitude >= self.horizon_deg(station, azimuth)
@@ -215,7 +216,7 @@ def span_clock(array: Array, stations: tuple[Station, ...], start: str, end: str
     first, last = parse_utc(start, "from"), parse_utc(end, "to")
     if not first <= last <= first + _LONGEST_SPAN_DAY:
         raise InputError(f"to is {end}; it must lie within two days after from, {start}")
-    return Clock(array, stations, _even_times(first, last, _STEP_MIN))
+    return Clock(array, stations, _even_times(first, last, _step_min(array, stations)))
 
 
 def night_clock(array: Array, stations: tuple[Station, ...], night: str) -> Clock:
@@ -229,14 +230,27 @@ def night_clock(array: Array, stations: tuple[Station, ...], night: str) -> Cloc
     if len(night.strip()) > 10:
         raise InputError(f"night is {night!r}; write the date of its evening, such as 2026-12-01")
     longitude = (array.longitude_deg + 180) % 360 - 180
-    noon = parse_utc(night, "night") + 0.5 - longitude / 360
+    try:
+        noon = parse_utc(night, "night") + 0.5 - longitude / 360
+    except InputError as error:
+        raise InputError(str(error).replace("UTC as 2026-12-01T22:30:00Z", "a date as 2026-12-01")) from error
     day = Clock(array, stations, noon + np.arange(145, dtype=np.float64) * 10 * _MINUTE_DAY)
     [windows] = find_windows(day.times, day.dark(day.times)[None], lambda _, times: day.dark(times))
     if not windows:
         limit = array.limits.sun_altitude_max_deg
         raise InputError(f"night is {night}; at {array.name} the Sun does not go below {limit:g} deg then")
     start, end = max(windows, key=lambda window: window[1] - window[0])
-    return Clock(array, stations, _even_times(start, end, _STEP_MIN))
+    return Clock(array, stations, _even_times(start, end, _step_min(array, stations)))
+
+
+def _walled(array: Array, stations: tuple[Station, ...]) -> list[Station]:
+    """Stations with a horizon that rises above the altitude limit somewhere."""
+    lowest = array.limits.altitude_min_deg
+    return [s for s in stations if max((height for _, height in s.horizon), default=0.0) > lowest]
+
+
+def _step_min(array: Array, stations: tuple[Station, ...]) -> float:
+    return _WALLED_STEP_MIN if _walled(array, stations) else _STEP_MIN
 
 
 def _even_times(first: float, last: float, step_min: float) -> Floats:

@@ -3,6 +3,7 @@
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from functools import partial
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -110,11 +111,9 @@ def rank(
     excluded = {reason: len(failing) for reason, failing in ranked.excluded.items()}
     if too_far := len(stars) - len(rows):
         excluded["too_far"] = too_far
-    windows = _windows(stars, ranked, reach, best)
-    calibrators = [
-        _calibrator(stars, ranked, standings, index, windows[index] if windows else None)
-        for index in range(min(best, len(ranked.rows)))
-    ]
+    listed = range(min(best, len(ranked.rows)))
+    whens: list[_When] = [_When() for _ in listed] if reach is None else _whens(stars, ranked, reach, best)
+    calibrators = [_calibrator(stars, ranked, standings, index, whens[index]) for index in listed]
     sets = _best_sets(stars, ranked, target, setup, judge, reach)
     named = None
     if with_ids:
@@ -178,10 +177,14 @@ def _assess(
         # Of the best, the one coarse setting that serves star and target for longest, and its baselines.
         rows, separations = rows[order], separations[order]
         together = reach.longest(stars, rows)
+        lost = ~together.times.any(axis=1)  # in reach for less than the steps of its windows
+        if lost.any():
+            excluded["out_of_reach"] = np.append(excluded.get("out_of_reach", rows[:0]), rows[lost])
+            rows, separations, together = rows[~lost], separations[~lost], together.only(np.flatnonzero(~lost))
         lengths_m, longest = together.baselines_m, together.baselines_m.max(axis=1)
         fixed = fixed_terms(stars, rows, separations, setup, magnitude)
         order, budget, more = _in_order(stars, rows, setup, fixed, judge, lengths_m, limits.v2_min, most)
-        count, too_large = count - len(more), np.append(too_large, rows[more])
+        count, too_large = count - int(lost.sum()) - len(more), np.append(too_large, rows[more])
     if len(too_large):
         excluded["resolved"] = too_large
     return _Ranked(
@@ -246,13 +249,27 @@ def _left_out(
     return shown
 
 
-def _windows(
-    stars: StarColumns, ranked: _Ranked, reach: TargetReach | None, best: int
-) -> list[list[Window]] | None:
-    if reach is None or ranked.reach is None:
-        return None
-    assert ranked.reach.settings is not None
-    return reach.windows(stars, ranked.rows[:best], ranked.reach.settings[:best])
+class _When(NamedTuple):
+    """The windows of stars together with the target, and the coarse paths that they are under."""
+
+    windows: tuple[Window, ...] | None = None
+    coarse_paths_m: dict[str, float] | None = None
+
+
+def _whens(stars: StarColumns, ranked: _Ranked, reach: TargetReach, best: int) -> list[_When]:
+    """Of the listed stars."""
+    assert ranked.reach is not None
+    theirs = ranked.reach.only(np.arange(min(best, len(ranked.rows))))
+    assert theirs.settings is not None
+    return _told(reach, theirs.settings, reach.windows(stars, ranked.rows[:best], theirs))
+
+
+def _told(reach: TargetReach, settings: NDArray[np.int64], windows: list[list[Window]]) -> list[_When]:
+    stations = reach.clock.stations
+    return [
+        _When(tuple(when), coarse_paths_m(stations, tuple(chosen)) if when else None)
+        for chosen, when in zip(settings.tolist(), windows, strict=True)
+    ]
 
 
 def _calibrator(
@@ -260,7 +277,7 @@ def _calibrator(
     ranked: _Ranked,
     standings: Mapping[int, str],
     index: int,
-    windows: list[Window] | None,
+    when: _When,
 ) -> Calibrator:
     row, budget = int(ranked.rows[index]), ranked.budget
     star_id = int(stars.ids[row])
@@ -291,7 +308,8 @@ def _calibrator(
         budget={name: None if (term := budget.terms[name]) is None else float(term[index]) for name in TERMS},
         calibration_error=float(budget.total[index]),
         standing=standings.get(star_id),
-        windows=None if windows is None else tuple(windows),
+        windows=when.windows,
+        coarse_paths_m=when.coarse_paths_m,
     )
 
 
@@ -314,7 +332,7 @@ def _set_covariance(
             diagonal += term[members] ** 2
     shared_error = stars.shared_error_mas[rows].astype(float) / stars.diameter_mas[rows]
     scaled = ranked.budget.slopes[members] * shared_error[:, None]
-    product = scaled @ scaled.T / scaled.shape[1]
+    product = np.einsum("ik,jk->ij", scaled, scaled) / scaled.shape[1]
     if judge == "worst":
         steepest = scaled.min(axis=1)
         product = steepest[:, None] * steepest[None, :]
@@ -344,9 +362,13 @@ def _best_sets(
     covariance = _set_covariance(stars, ranked, target, setup, judge, members)
     possible = None if reach is None else partial(reach.ever_together, stars, ranked.rows[members])
     found = best_subsets(*covariance, possible=possible)
+    rows = [ranked.rows[list(subset)] for subset, _ in found]
+    whens = [_When() for _ in found]
+    if reach is not None:
+        whens = _told(reach, *reach.common_windows(stars, rows))
     return [
-        CalibratorSet(tuple(int(stars.ids[ranked.rows[member]]) for member in subset), float(np.sqrt(variance)))
-        for subset, variance in found
+        CalibratorSet(tuple(stars.ids[some].tolist()), float(np.sqrt(variance)), *when)
+        for some, (_, variance), when in zip(rows, found, whens, strict=True)
     ]
 
 
@@ -384,7 +406,8 @@ def _named_set(
         )
     covariance = _set_covariance(stars, ranked, target, setup, judge, everyone)
     variance = subset_variances(*covariance, everyone[None])[0]
-    return CalibratorSet(tuple(int(stars.ids[row]) for row in ranked.rows), float(np.sqrt(variance)))
+    when = _When() if reach is None else _told(reach, *reach.common_windows(stars, [ranked.rows]))[0]
+    return CalibratorSet(tuple(stars.ids[ranked.rows].tolist()), float(np.sqrt(variance)), *when)
 
 
 def _names(stars: StarColumns, sets: list[CalibratorSet]) -> dict[int, str]:

@@ -35,10 +35,16 @@ def windows_json(windows: Iterable[Window]) -> list[dict[str, str]]:
 
 @dataclass(frozen=True)
 class CalibratorSet:
-    """Stars looked at together, and their calibration error, relative."""
+    """Stars looked at together, and their calibration error, relative.
+
+    With a clock, `windows` tell when all are in reach with the target under one coarse setting, the one that
+    serves them for longest, `coarse_paths_m`.
+    """
 
     star_ids: tuple[int, ...]
     calibration_error: float
+    windows: tuple[Window, ...] | None = None
+    coarse_paths_m: dict[str, float] | None = None
 
     def to_dict(self) -> dict[str, Any]:
         """As it stands in a ranking's JSON."""
@@ -46,6 +52,8 @@ class CalibratorSet:
             "size": len(self.star_ids),
             "star_ids": list(self.star_ids),
             "calibration_error_percent": _rounded(100 * self.calibration_error, 4),
+            "window_utc": None if self.windows is None else windows_json(self.windows),
+            "coarse_paths_m": self.coarse_paths_m,
         }
 
 
@@ -74,6 +82,7 @@ class Calibrator:
     calibration_error: float
     standing: str | None
     windows: tuple[Window, ...] | None
+    coarse_paths_m: dict[str, float] | None
 
     def to_dict(self, band: str) -> dict[str, Any]:
         """As it stands in a ranking's JSON."""
@@ -111,6 +120,7 @@ class Calibrator:
             "calibration_error_percent": _rounded(100 * self.calibration_error, 4),
             "standing": self.standing,
             "window_utc": None if self.windows is None else windows_json(self.windows),
+            "coarse_paths_m": self.coarse_paths_m,
         }
 
 
@@ -132,7 +142,8 @@ class Ranking:
     the best set of each size from 1, with a clock only of stars that are in reach at one time under
     one coarse setting; `named_set` is one that the caller asked for. With a clock,
     `span` is the time looked at, `target_windows` are the target's, and `coarse_paths_m` the
-    coarse delay settings that give it its longest one. `names` are the names of the stars in sets;
+    coarse delay settings that give it its longest one; a star's and a set's own settings stand with
+    them. `names` are the names of the stars in sets;
     `left_out` names the nearest of the excluded stars by reason, those too far from the target not among them.
     """
 

@@ -86,8 +86,11 @@ def next_minute(mjd_tai: float) -> float:
     '2026-12-01T20:16:00Z'
     """
     utc1, utc2 = _utc_parts(mjd_tai)
-    minutes = ((utc1 - _MJD) + utc2) * 1440
-    return float(mjd_tai + (np.ceil(minutes - 1e-5) - minutes) / 1440)
+    # Read off the clock: a day with a leap second has a longer last minute.
+    _, _, _, clock, _ = erfa.ufunc.d2dtf(b"UTC", 3, utc1, utc2)
+    past_s = int(clock["s"]) + int(clock["f"]) / 1000
+    length_s = 61 if past_s >= 60 else 60
+    return float(mjd_tai + (length_s - past_s) / _DAY_S) if past_s else float(mjd_tai)
 
 
 @lru_cache(maxsize=1)
