@@ -336,7 +336,7 @@ QUICK = ("--baseline-m", 100, "--wavelength-um", 1.65)
         (("nonsense",), "No such command 'nonsense'"),
         (
             ("rank", "tau Cet", "--array", "north", "--mode", "H", "--night", "soon"),
-            "night is 'soon'; write UTC as",
+            "night is 'soon'; write a date as",
         ),
         (("rank", "tau Cet", *QUICK, "--night", "2026-12-01"), "is given without an array"),
         (

@@ -166,7 +166,7 @@ def test_a_named_target_stands_where_it_has_moved_to(catalogue, north):
     assert np.abs(clock.uvw_m(*clock.apparent(*place), clock.times) - uvw).max() > 0.02
 
 
-def test_stars_that_need_different_coarse_settings_are_no_set(north):
+def test_stars_that_no_coarse_setting_serves_at_one_moment_are_no_set(north):
     # Two stations east and west, no cart to speak of: a star needs the setting that its hour angle asks for.
     first = north.station[0].model_copy(
         update={"east_m": 0.0, "north_m": 0.0, "up_m": 0.0, "cart_m": 10.2, "coarse_paths_m": (0.0,)}
@@ -190,7 +190,6 @@ def test_stars_that_need_different_coarse_settings_are_no_set(north):
     assert not any(shared)
     assert len(apart.calibrators) == 2
     assert [len(one.star_ids) for one in apart.best_sets] == [1]
-    assert apart.calibrators[0].coarse_paths_m != apart.calibrators[1].coarse_paths_m
     generous = [s.model_copy(update={"cart_m": 60.0}) for s in array.station]
     roomy = span_clock(
         array.model_copy(update={"station": tuple(generous)}),
