@@ -3,17 +3,22 @@
 import threading
 from collections.abc import Iterator
 from contextlib import contextmanager
+from queue import Queue
 
-import waitress
 from flask import Flask
+
+from pinlight.faces.serving import serve_app
 
 
 @contextmanager
 def serving(app: Flask) -> Iterator[str]:
     """Serve an application on a free port of this machine; its address."""
-    server = waitress.create_server(app, host="127.0.0.1", port=0, threads=6)
-    thread = threading.Thread(target=server.run, daemon=True)
+    addresses: Queue[str] = Queue()
+    thread = threading.Thread(
+        target=serve_app, args=(app, "127.0.0.1", 0), kwargs={"ready": addresses.put}, daemon=True
+    )
     thread.start()
-    yield f"http://127.0.0.1:{server.effective_port}"
-    server.close()
-    thread.join(timeout=5)
+    yield addresses.get(timeout=10).rstrip("/")
+    app.extensions["pinlight_stopping"].set()
+    thread.join(timeout=30)
+    assert not thread.is_alive()

@@ -9,7 +9,16 @@ if TYPE_CHECKING:
     from pinlight.arrays.files import Array, load_array
     from pinlight.catalogue.making import make_catalogue
     from pinlight.catalogue.store import Catalogue, open_catalogue
-    from pinlight.errors import CatalogueError, InputError, NotFoundError, PinlightError
+    from pinlight.errors import (
+        CatalogueError,
+        InputError,
+        NotAllowedError,
+        NotFoundError,
+        PinlightError,
+        ServiceError,
+        TokenError,
+    )
+    from pinlight.faces.client import Client
     from pinlight.faces.library import best_set, plan_night, rank
     from pinlight.faces.targets import read_requests
     from pinlight.planning.night import NightPlan, Request
@@ -20,13 +29,17 @@ __all__ = [
     "Array",
     "Catalogue",
     "CatalogueError",
+    "Client",
     "InputError",
     "NightPlan",
+    "NotAllowedError",
     "NotFoundError",
     "PinlightError",
     "Ranking",
     "Request",
+    "ServiceError",
     "Target",
+    "TokenError",
     "__version__",
     "best_set",
     "load_array",
@@ -42,13 +55,17 @@ _HOMES = {
     "Array": "pinlight.arrays.files",
     "Catalogue": "pinlight.catalogue.store",
     "CatalogueError": "pinlight.errors",
+    "Client": "pinlight.faces.client",
     "InputError": "pinlight.errors",
     "NightPlan": "pinlight.planning.night",
+    "NotAllowedError": "pinlight.errors",
     "NotFoundError": "pinlight.errors",
     "PinlightError": "pinlight.errors",
     "Ranking": "pinlight.ranking.result",
     "Request": "pinlight.planning.night",
+    "ServiceError": "pinlight.errors",
     "Target": "pinlight.ranking.target",
+    "TokenError": "pinlight.errors",
     "best_set": "pinlight.faces.library",
     "load_array": "pinlight.arrays.files",
     "make_catalogue": "pinlight.catalogue.making",

@@ -7,6 +7,7 @@ __all__ = [
     "NotFoundError",
     "PinlightError",
     "SeedFileError",
+    "ServiceError",
     "TokenError",
 ]
 
@@ -37,3 +38,7 @@ class CatalogueError(PinlightError):
 
 class SeedFileError(CatalogueError):
     """A bad row in the file that a catalogue is filled from, with its file and row."""
+
+
+class ServiceError(PinlightError):
+    """A remote Pinlight cannot be reached in time, or answered badly."""

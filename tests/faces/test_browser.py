@@ -1,16 +1,16 @@
 """The page in a real browser: Debian's Chromium, driven by Playwright, against the served application."""
 
 import os
-import shutil
 import time
 from pathlib import Path
 
 import pytest
 
 import pinlight as pl
+from pinlight.catalogue.members import add_member
+from pinlight.faces.http import create_app
+from tests.served import serving
 
-# Set where a test that needs the browser may not be skipped.
-MUST_RUN = "PINLIGHT_TEST_BROWSER"
 # Where screenshots are kept, if anywhere.
 SCREENSHOTS = "PINLIGHT_TEST_SCREENSHOTS"
 
@@ -18,19 +18,6 @@ NIGHT = "target=upsilon+And&array=north&mode=H&night=2026-12-01"
 PLAN = "targets=upsilon+And%0AHD+3651%0A61.9+-67.3&array=north&mode=H&night=2026-12-01"
 PHONE = {"width": 390, "height": 844}
 DESKTOP = {"width": 1440, "height": 900}
-
-
-@pytest.fixture(scope="module")
-def browser():
-    program = shutil.which("chromium") or shutil.which("chromium-browser")
-    if program is None and not os.environ.get(MUST_RUN):
-        pytest.skip("there is no Chromium; apt-get install chromium")
-    from playwright.sync_api import sync_playwright
-
-    with sync_playwright() as playwright:
-        opened = playwright.chromium.launch(executable_path=program, args=["--no-sandbox"])
-        yield opened
-        opened.close()
 
 
 class Visit:
@@ -363,3 +350,32 @@ def test_the_audit_would_notice_a_barrier(visit):
     page = visit().open("/api")
     page.evaluate("document.querySelector('main').innerHTML += '<img src=\"/static/pinlight.svg\"><input>'")
     assert {rule for rule, _, _ in barriers(page)} >= {"image-alt", "label"}
+
+
+@pytest.mark.parametrize("seeded_url", ["sqlite"], indirect=True)
+def test_a_member_judges_a_star(browser, seeded_url, opened):
+    catalogue = opened(seeded_url)
+    keeper = catalogue.acting(add_member(catalogue, "Kit", "keeper"))
+    editor = add_member(keeper, "Ed", "editor")
+    star_id = catalogue.find("HD 10132")
+    with serving(create_app(catalogue)) as address:
+        one = Visit(browser, address)
+        page = one.open(f"/star/{star_id}")
+        page.get_by_text("Judge it").click()
+        page.get_by_label("Standing").select_option("barred")
+        page.get_by_label("Reason").fill("a companion at 20 mas")
+        page.get_by_label("Your token").fill("no such token")
+        page.get_by_role("button", name="Record it").click()
+        page.get_by_text("Not recorded:").wait_for()
+        page.get_by_label("Your token").fill(editor)
+        page.get_by_role("button", name="Record it").click()
+        page.get_by_text("barred by the team").wait_for()
+        assert "a companion at 20 mas" in page.locator(".record").text_content()
+        page.get_by_text("Judge it").click()
+        assert page.get_by_label("Your token").input_value() == editor  # kept while the tab is open
+        one.open(f"/?{NIGHT}")
+        assert star_id not in one.listed()
+        page.get_by_text("Left out:").click()
+        page.get_by_text("barred by a member of the team").click()
+        assert page.get_by_role("link", name="HD 10132").is_visible()
+        one.context.close()

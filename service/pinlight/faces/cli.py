@@ -64,6 +64,36 @@ def _span(function: Callable[..., Any]) -> Callable[..., Any]:
     return click.option("--night", metavar="YYYY-MM-DD", help=night_help)(function)
 
 
+def _question(function: Callable[..., Any]) -> Callable[..., Any]:
+    """The options of a ranking."""
+    function = click.option(
+        "--with", "with_", metavar="NAME,NAME", help="A set of stars to evaluate beside the best ones."
+    )(function)
+    function = click.option("--at", metavar="UTC", help="One time, in place of a night.")(function)
+    function = _span(function)
+    function = click.option("--edition", help="An older edition of the catalogue.")(function)
+    function = click.option("--best", default=20, show_default=True, help="How many to list.")(function)
+    function = click.option(
+        "--judge", default="rms", show_default=True, help="rms or worst, over baselines and channels."
+    )(function)
+    function = click.option("--v2-min", type=float, help="Floor of the calibrator's squared visibility.")(
+        function
+    )
+    function = click.option("--magnitude-max", type=float, help="In place of the mode's limit.")(function)
+    function = click.option("--separation-max-deg", type=float, help="In place of the array's limit.")(function)
+    function = click.option(
+        "--wavelength-um", type=float, help="Quick answer without an array: the wavelength."
+    )(function)
+    function = click.option("--baseline-m", type=float, help="Quick answer without an array: the baseline.")(
+        function
+    )
+    function = click.option("--mode", help="The camera's mode.")(function)
+    function = click.option("--stations", metavar="A,B,…", help="Stations to use; all by default.")(function)
+    return click.option(
+        "--array", metavar="FILE|NAME", help="An array file, or north or south (invented ones)."
+    )(function)
+
+
 def _names(text: str | None) -> list[str] | None:
     return None if text is None else [name.strip() for name in text.split(",") if name.strip()]
 
@@ -98,23 +128,17 @@ def init(db: str | None, empty: bool) -> None:
 @main.command()
 @click.argument("target")
 @_db
-@click.option("--array", metavar="FILE|NAME", help="An array file, or north or south (invented ones).")
-@click.option("--stations", metavar="A,B,…", help="Stations to use; all by default.")
-@click.option("--mode", help="The camera's mode.")
-@click.option("--baseline-m", type=float, help="Quick answer without an array: the baseline.")
-@click.option("--wavelength-um", type=float, help="Quick answer without an array: the wavelength.")
-@click.option("--separation-max-deg", type=float, help="In place of the array's limit.")
-@click.option("--magnitude-max", type=float, help="In place of the mode's limit.")
-@click.option("--v2-min", type=float, help="Floor of the calibrator's squared visibility.")
-@click.option("--judge", default="rms", show_default=True, help="rms or worst, over baselines and channels.")
-@click.option("--best", default=20, show_default=True, help="How many to list.")
-@click.option("--edition", help="An older edition of the catalogue.")
-@_span
-@click.option("--at", metavar="UTC", help="One time, in place of a night.")
-@click.option("--with", "with_", metavar="NAME,NAME", help="A set of stars to evaluate beside the best ones.")
+@_question
+@click.option("--report", type=click.Path(path_type=Path), help="Write a printable page with charts here.")
 @_as_json
 def rank(
-    target: str, db: str | None, as_json: bool, stations: str | None, with_: str | None, **options: Any
+    target: str,
+    db: str | None,
+    as_json: bool,
+    stations: str | None,
+    with_: str | None,
+    report: Path | None,
+    **options: Any,
 ) -> None:
     """Rank calibrators for TARGET: a star's name, coordinates, or a CSV file of targets."""
     from pinlight.catalogue.store import open_catalogue
@@ -127,6 +151,12 @@ def rank(
     targets = read_targets(Path(target), catalogue) if in_file else [target]
     options |= {"stations": _names(stations), "with_": _names(with_)}
     rankings = [rank_target(catalogue, one, **options) for one in targets]
+    if report is not None:
+        if in_file and report.resolve() == Path(target).resolve():
+            raise InputError(f"--report is {report}, which is also TARGET; name another file")
+        from pinlight.faces.papers import ranking_page
+
+        _write(report, ranking_page(rankings))
     if as_json:
         _print_json(_several(rankings) if in_file else rankings[0].to_dict())
     else:
@@ -142,6 +172,26 @@ def _several(rankings: "list[Ranking]") -> dict[str, Any]:
         "pinlight": __version__,
         "rankings": [ranking.to_dict() for ranking in rankings],
     }
+
+
+@main.command()
+@click.argument("target")
+@_db
+@_question
+def send(target: str, db: str | None, stations: str | None, with_: str | None, **options: Any) -> None:
+    """Rank calibrators for TARGET and send them to the table and sky viewers that are running (SAMP)."""
+    from platformdirs import user_cache_path
+
+    from pinlight.catalogue.store import open_catalogue
+    from pinlight.faces.library import rank as rank_target
+    from pinlight.faces.samp import send_ranking
+
+    options |= {"stations": _names(stations), "with_": _names(with_)}
+    ranking = rank_target(open_catalogue(db), target, **options)
+    folder = user_cache_path("pinlight") / "sent"
+    folder.mkdir(parents=True, exist_ok=True)
+    names = send_ranking(ranking, folder)
+    click.echo(f"sent {len(ranking.calibrators)} stars to {', '.join(names)}", err=True)
 
 
 @main.command()

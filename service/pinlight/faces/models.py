@@ -284,6 +284,7 @@ class CountsAnswer(_Answer):
 class SetAnswer(_Answer):
     size: int
     star_ids: list[int]
+    names: list[str]
     calibration_error_percent: float | None
     window_utc: list[Window] | None
     coarse_paths_m: dict[str, float] | None

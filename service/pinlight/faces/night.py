@@ -1,6 +1,5 @@
 """The night on the page: targets a line each, the blocks of looks, and the night on paper."""
 
-from datetime import datetime, timedelta
 from typing import Any
 from urllib.parse import urlencode
 
@@ -9,14 +8,13 @@ from flask import Blueprint, Response, request
 from pinlight.errors import InputError, NotFoundError
 from pinlight.faces.frame import address_question, form_context, render_page, with_defaults
 from pinlight.faces.library import plan_night
-from pinlight.faces.papers import plan_csv, plan_ics, plan_page
+from pinlight.faces.papers import plan_csv, plan_ics, plan_page, timeline
 from pinlight.faces.service import service
 from pinlight.faces.setups import named_array
 from pinlight.faces.targets import requests_from_text, resolve_target
 from pinlight.planning.night import NightPlan, Request
-from pinlight.sky.time import format_utc
 
-__all__ = ["night", "timeline"]
+__all__ = ["night"]
 
 night = Blueprint("night", __name__)
 
@@ -71,36 +69,6 @@ def _plan_of(requests: list[Request], asked: dict[str, str]) -> NightPlan:
         edition=asked.get("edition"),
         time_limit_s=_TIME_LIMIT_S,
     )
-
-
-def timeline(plan: NightPlan) -> dict[str, Any]:
-    """Whole hours, blocks and looks as shares of the night, in per cent."""
-    start, end = plan.span
-
-    def share(mjd_tai: float) -> float:
-        return round(100 * (mjd_tai - start) / (end - start), 3)
-
-    first, last = (datetime.fromisoformat(format_utc(time).replace(":60Z", ":59Z")) for time in plan.span)
-    hour = first.replace(minute=0, second=0) + timedelta(hours=1)
-    marks = []
-    while hour < last:
-        marks.append((round(100 * (hour - first) / (last - first), 3), f"{hour:%H}"))
-        hour += timedelta(hours=1)
-    return {
-        "marks": marks,
-        "blocks": [
-            {
-                "target": block.target,
-                "start": share(block.start),
-                "width": round(share(block.end) - share(block.start), 3),
-                "looks": [
-                    (look, share(look.start), round(share(look.end) - share(look.start), 3))
-                    for look in block.looks
-                ],
-            }
-            for block in plan.blocks
-        ],
-    }
 
 
 @night.get("/plan.csv")

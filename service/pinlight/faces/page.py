@@ -9,6 +9,7 @@ from urllib.parse import urlencode
 
 from flask import Blueprint, Response, render_template, request, url_for
 
+from pinlight.catalogue.standings import STANDINGS
 from pinlight.errors import InputError, NotFoundError
 from pinlight.faces.frame import address_question, bokeh_version, form_context, render_page, with_defaults
 from pinlight.faces.models import RankingQuestion
@@ -171,7 +172,12 @@ def star_view(star_id: int) -> str:
         raise NotFoundError(f"star_id is {star_id}; there is no such star")
     star = service().catalogue.star(star_id)
     return render_page(
-        "star.html", star=star, title=f"{star['name']} · Pinlight", spread=_spread(star["diameter"])
+        "star.html",
+        standings=STANDINGS,
+        arrays=service().arrays,
+        star=star,
+        title=f"{star['name']} · Pinlight",
+        spread=_spread(star["diameter"]),
     )
 
 

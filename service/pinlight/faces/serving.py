@@ -156,6 +156,7 @@ def serve_app(
     ----------
     app : Flask
     host, port, threads
+        Port 0 takes one that is free.
     access_log : path, optional
         One line of JSON a request is added to it; ``-`` is standard error.
     ready : function
@@ -198,15 +199,19 @@ def serve_app(
     if threading.current_thread() is threading.main_thread():
         for name in (signal.SIGTERM, signal.SIGINT):
             signal.signal(name, lambda *_: stopping.set())
-    ready(f"http://{f'[{host}]' if ':' in host else host}:{port}/")
+    listeners = [one for one in sockets.values() if getattr(one, "accepting", False)]
+    taken = listeners[0].effective_port
+    ready(f"http://{f'[{host}]' if ':' in host else host}:{taken}/")
     while not stopping.is_set():
         wasyncore.loop(timeout=0.5, map=sockets, count=1)
-    for listener in [one for one in sockets.values() if getattr(one, "accepting", False)]:
+    for listener in listeners:
         wasyncore.dispatcher.close(listener)
     end = time.monotonic() + _GRACE_S
     while time.monotonic() < end and any(map(_busy, list(sockets.values()))):
         wasyncore.loop(timeout=0.1, map=sockets, count=1)
     server.task_dispatcher.shutdown(timeout=1)
+    for one in list(sockets.values()):
+        one.close()
 
 
 def _busy(channel: Any) -> bool:

@@ -126,12 +126,13 @@ class NightPlan:
     objective: float
     bound: float
     notes: tuple[str, ...]
+    pinlight: str = __version__
 
     def to_dict(self) -> dict[str, Any]:
         """The JSON of a plan, as described in the project's interface."""
         return {
             "edition": self.edition,
-            "pinlight": __version__,
+            "pinlight": self.pinlight,
             "setup": self.setup.to_dict(),
             "span_utc": {"start_utc": format_utc(self.span[0]), "end_utc": format_utc(self.span[1])},
             "blocks": [block.to_dict() for block in self.blocks],

@@ -2,7 +2,7 @@
 
 import itertools
 import math
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -46,11 +46,12 @@ class CalibratorSet:
     windows: tuple[Window, ...] | None = None
     coarse_paths_m: dict[str, float] | None = None
 
-    def to_dict(self) -> dict[str, Any]:
+    def to_dict(self, names: Mapping[int, str]) -> dict[str, Any]:
         """As it stands in a ranking's JSON."""
         return {
             "size": len(self.star_ids),
             "star_ids": list(self.star_ids),
+            "names": [names[star_id] for star_id in self.star_ids],
             "calibration_error_percent": _rounded(100 * self.calibration_error, 4),
             "window_utc": None if self.windows is None else windows_json(self.windows),
             "coarse_paths_m": self.coarse_paths_m,
@@ -86,6 +87,7 @@ class Calibrator:
 
     def to_dict(self, band: str) -> dict[str, Any]:
         """As it stands in a ranking's JSON."""
+        own, shared = round(self.own_error_mas, 5), round(self.shared_error_mas, 5)
         return {
             "rank": self.rank,
             "star_id": self.star_id,
@@ -103,9 +105,9 @@ class Calibrator:
                 "limb_darkened_mas": round(self.limb_darkened_mas, 5),
                 "uniform_disk_mas": round(self.uniform_disk_mas, 5),
                 "band": band,
-                "own_error_mas": round(self.own_error_mas, 5),
-                "shared_error_mas": round(self.shared_error_mas, 5),
-                "error_mas": round(math.hypot(self.own_error_mas, self.shared_error_mas), 5),
+                "own_error_mas": own,
+                "shared_error_mas": shared,
+                "error_mas": round(math.hypot(own, shared), 5),
                 "relations": list(self.relations),
                 "discordant": "discordant" in self.flags,
             },
@@ -192,8 +194,8 @@ class Ranking:
             "calibrators": [star.to_dict(self.setup.band) for star in self.calibrators],
             "counts": {"stars": self.stars, "ranked": self.ranked, "listed": len(self.calibrators)},
             "excluded": dict(self.excluded),
-            "best_sets": [one.to_dict() for one in self.best_sets],
-            "named_set": None if self.named_set is None else self.named_set.to_dict(),
+            "best_sets": [one.to_dict(self.names) for one in self.best_sets],
+            "named_set": None if self.named_set is None else self.named_set.to_dict(self.names),
             "span_utc": None if self.span is None else windows_json([self.span])[0],
             "target_window_utc": None if self.target_windows is None else windows_json(self.target_windows),
             "coarse_paths_m": self.coarse_paths_m,
