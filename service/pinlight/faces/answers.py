@@ -152,6 +152,7 @@ def _calibrator(star: Json) -> Calibrator:
         calibration_error=_relative(star["calibration_error_percent"]),
         standing=star["standing"],
         windows=None if windows is None else tuple(map(_window, windows)),
+        coarse_paths_m=star["coarse_paths_m"],
     )
 
 
