@@ -15,7 +15,7 @@ from pinlight.errors import InputError
 from pinlight.planning.blocks import Sequence as LookSequence
 from pinlight.planning.blocks import StarErrors, best_sequences, look_variances, worth_most
 from pinlight.planning.solver import Candidate, choose_blocks
-from pinlight.ranking.budget import TERMS, error_budget, fixed_terms
+from pinlight.ranking.budget import TERMS, error_budget, fixed_terms, shared_covariance
 from pinlight.ranking.clock import Clock
 from pinlight.ranking.columns import StarColumns
 from pinlight.ranking.rank import rank
@@ -383,9 +383,7 @@ def _star_errors(
     stars: StarColumns, rows: NDArray[np.int64], setup: Setup, target: Target, clock: Clock, when: float
 ) -> StarErrors:
     """What a block needs to know of some calibrators, with the baselines of one time."""
-    pm_ra, pm_dec, parallax, velocity = stars.motion(rows)
-    ra, dec = clock.apparent(stars.ra_deg[rows], stars.dec_deg[rows], (pm_ra, pm_dec, parallax, velocity))
-    delays = clock.delays_m(ra, dec, np.full(len(rows), when))
+    delays = clock.delays_m(*clock.places(stars, rows), np.full(len(rows), when))
     lengths = np.sqrt(np.maximum(clock.baseline_lengths_m[:, None] ** 2 - delays**2, 0.0)).T
     magnitude = target.magnitudes.get(setup.band)
     fixed = fixed_terms(stars, rows, np.zeros(len(rows)), setup, magnitude) | {"drift": None}
@@ -395,10 +393,7 @@ def _star_errors(
         term = budget.terms[name]
         return np.zeros(len(rows)) if term is None else term**2
 
-    shared = stars.shared_error_mas[rows].astype(float) / stars.diameter_mas[rows]
-    scaled = budget.slopes * shared[:, None]
-    common = (stars.relations_used[rows][:, None] & stars.relations_used[rows][None, :]) != 0
-    together = np.where(common, scaled @ scaled.T / scaled.shape[1], 0.0)
+    together = shared_covariance(stars, rows, budget.slopes, "rms")
     star = sum((square(name) for name in TERMS if name not in ("drift", "photon")), np.zeros(len(rows)))
     return StarErrors(
         ra_deg=np.asarray(stars.ra_deg[rows]),
@@ -420,10 +415,7 @@ def _possible_starts(
     """Minutes at which the block can start, with its error and the coarse setting that holds throughout."""
     target, lines = request.target, minutes.delay_lines
     rows = np.unique(pool[list(sequence.calibrators)])
-    pm_ra, pm_dec, parallax, velocity = stars.motion(rows)
-    star_ra, star_dec = minutes.apparent(
-        stars.ra_deg[rows], stars.dec_deg[rows], (pm_ra, pm_dec, parallax, velocity)
-    )
+    star_ra, star_dec = minutes.places(stars, rows)
     target_ra, target_dec = minutes.apparent(target.ra_deg, target.dec_deg, target.motion)
     ra, dec = np.append(star_ra, target_ra)[:, None], np.append(star_dec, target_dec)[:, None]
     allowed = np.asarray(minutes.observable(ra, dec, minutes.times).all(axis=0))

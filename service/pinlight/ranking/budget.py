@@ -23,6 +23,7 @@ __all__ = [
     "fixed_terms",
     "known_companion_terms",
     "lowest_v2",
+    "shared_covariance",
 ]
 
 Floats = NDArray[np.float64]
@@ -76,6 +77,23 @@ class Budget:
             self.limb_darkening[which],
             self.slopes[which],
         )
+
+
+def shared_covariance(stars: StarColumns, rows: NDArray[np.int64], slopes: Floats, judge: str) -> Floats:
+    """Covariance of the error that the shared part of the diameters puts into stars' V^2, shape (N, N).
+
+    Stars that used a relation in common share it, by the mean product of their `slopes`, shape (N, S), over
+    baselines and channels, or at each star's steepest one when judging by the worst.
+    """
+    shared = stars.shared_error_mas[rows].astype(float) / stars.diameter_mas[rows]
+    scaled = slopes * shared[:, None]
+    # Not by BLAS: its threads cost more than so small a product.
+    product = np.einsum("ik,jk->ij", scaled, scaled) / scaled.shape[1]
+    if judge == "worst":
+        steepest = scaled.min(axis=1)
+        product = steepest[:, None] * steepest[None, :]
+    common = (stars.relations_used[rows][:, None] & stars.relations_used[rows][None, :]) != 0
+    return np.where(common, product, 0.0)
 
 
 def drift_error(

@@ -10,6 +10,7 @@ from pinlight.arrays.files import Array, Station
 from pinlight.arrays.geometry import equatorial_m, project_uvw_m
 from pinlight.arrays.reach import DelayLines
 from pinlight.errors import InputError
+from pinlight.ranking.columns import StarColumns
 from pinlight.sky.places import (
     Site,
     altitude_azimuth_deg,
@@ -110,6 +111,11 @@ class Clock:
     ) -> tuple[Floats, Floats]:
         """Apparent places of date of ICRS positions at the middle of the span, shape (N,)."""
         return apparent_place_deg(ra_deg, dec_deg, self.middle, motion)
+
+    def places(self, stars: StarColumns, rows: NDArray[np.int64]) -> tuple[Floats, Floats]:
+        """Apparent places of date of an edition's stars, their motion included, shape (N,)."""
+        pm_ra, pm_dec, parallax, velocity = stars.motion(rows)
+        return self.apparent(stars.ra_deg[rows], stars.dec_deg[rows], (pm_ra, pm_dec, parallax, velocity))
 
     # Moon and the Earth's rotation are computed on the grid and interpolated between its times, the Sun on
     # the hours: their paths bend by less than an arcsecond between.

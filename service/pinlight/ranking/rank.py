@@ -11,7 +11,15 @@ from numpy.typing import NDArray
 from pinlight.arrays.reach import coarse_paths_m
 from pinlight.diameters.limb_darkening import uniform_disk_ratio
 from pinlight.errors import InputError
-from pinlight.ranking.budget import SECOND_LOBE_V2, TERMS, Budget, error_budget, fixed_terms, lowest_v2
+from pinlight.ranking.budget import (
+    SECOND_LOBE_V2,
+    TERMS,
+    Budget,
+    error_budget,
+    fixed_terms,
+    lowest_v2,
+    shared_covariance,
+)
 from pinlight.ranking.clock import Clock
 from pinlight.ranking.columns import StarColumns, flag_words
 from pinlight.ranking.gates import REASONS, close_gates
@@ -319,9 +327,7 @@ def _set_covariance(
     """What `subset_variances` needs of some ranked stars: covariances, that to the target, the sill.
 
     A look is one interval before or after the target's. A star's own terms stand on the diagonal, as its
-    budget sums them; the diameters' shared part correlates stars that used a relation in common, by
-    the mean product of their sensitivities over baselines and channels (at the star's worst one
-    when judging by the worst).
+    budget sums them; the diameters' shared part correlates stars.
     """
     rows, budget = ranked.rows[members], ranked.budget
     drift, interval = setup.drift, setup.look_interval_min
@@ -330,14 +336,8 @@ def _set_covariance(
         term = budget.terms[name]
         if name != "drift" and term is not None:
             diagonal += term[members] ** 2
-    shared_error = stars.shared_error_mas[rows].astype(float) / stars.diameter_mas[rows]
-    scaled = ranked.budget.slopes[members] * shared_error[:, None]
-    product = np.einsum("ik,jk->ij", scaled, scaled) / scaled.shape[1]
-    if judge == "worst":
-        steepest = scaled.min(axis=1)
-        product = steepest[:, None] * steepest[None, :]
-    common = (stars.relations_used[rows][:, None] & stars.relations_used[rows][None, :]) != 0
-    errors = np.where(np.eye(len(members), dtype=bool), diagonal[:, None], np.where(common, product, 0.0))
+    shared = shared_covariance(stars, rows, budget.slopes[members], judge)
+    errors = np.where(np.eye(len(members), dtype=bool), diagonal[:, None], shared)
     if drift is None or interval is None:
         return errors, errors, np.zeros(len(members)), 0.0
     ra, dec = np.append(stars.ra_deg[rows], target.ra_deg), np.append(stars.dec_deg[rows], target.dec_deg)

@@ -77,7 +77,7 @@ class TargetReach:
 
     def longest(self, columns: StarColumns, rows: Ints) -> StarsReach:
         """The same at the fine times, under those settings, a star, that serve it and the target longest."""
-        observable, delays = self._on_fine_times(*self._places(columns, rows))
+        observable, delays = self._on_fine_times(*self.clock.places(columns, rows))
         settings, times = self._served(delays, delays, observable)
         baselines_m = self._baselines_m(times, delays, _MOMENTS)
         return StarsReach(np.asarray(observable.any(axis=1)), times, baselines_m, settings)
@@ -110,7 +110,7 @@ class TargetReach:
         Shapes (N, T), (P, N, T) and (P, T).
         """
         clock, times = self.clock, self.times[::every]
-        ra, dec = (angle[:, None] for angle in self._places(columns, rows))
+        ra, dec = (angle[:, None] for angle in self.clock.places(columns, rows))
         observable = clock.observable(ra, dec, times) & clock.observable(*self.place, times)
         return observable, clock.delays_m(ra, dec, times), clock.delays_m(*self.place, times)
 
@@ -125,16 +125,10 @@ class TargetReach:
         projected = np.sqrt(np.maximum(squares, 0.0)).transpose(1, 2, 0)
         return projected.reshape(len(times), projected.shape[1] * projected.shape[2])
 
-    def _places(self, columns: StarColumns, rows: Ints) -> tuple[Floats, Floats]:
-        pm_ra, pm_dec, parallax, velocity = columns.motion(rows)
-        return self.clock.apparent(
-            columns.ra_deg[rows], columns.dec_deg[rows], (pm_ra, pm_dec, parallax, velocity)
-        )
-
     def windows(self, columns: StarColumns, rows: Ints, reach: StarsReach) -> list[list[Window]]:
         """Each star's windows together with the target, edges to 10 s; `reach` is that of `longest`."""
         assert reach.settings is not None
-        places = self._places(columns, rows)
+        places = self.clock.places(columns, rows)
         return self._edges(places, np.arange(len(rows))[:, None], reach.settings, reach.times)
 
     def common_windows(self, columns: StarColumns, sets: list[Ints]) -> tuple[Ints, list[list[Window]]]:
@@ -151,7 +145,7 @@ class TargetReach:
         windows : list of S lists of (start, end)
         """
         rows = np.unique(np.concatenate(sets))
-        places = self._places(columns, rows)
+        places = self.clock.places(columns, rows)
         up, delays = self._on_fine_times(*places)
         stars = [rows.searchsorted(one) for one in sets]
         low = np.stack([delays[:, one].min(axis=1) for one in stars], axis=1)
