@@ -157,7 +157,13 @@ def _calibrator(star: Json) -> Calibrator:
 
 
 def _set(one: Json) -> CalibratorSet:
-    return CalibratorSet(tuple(one["star_ids"]), _relative(one["calibration_error_percent"]))
+    windows = one["window_utc"]
+    return CalibratorSet(
+        tuple(one["star_ids"]),
+        _relative(one["calibration_error_percent"]),
+        None if windows is None else tuple(map(_window, windows)),
+        one["coarse_paths_m"],
+    )
 
 
 def _block(block: Json) -> Block:
