@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from sqlalchemy import Connection, insert, select
 
 from pinlight.catalogue.changes import Changing
+from pinlight.catalogue.database import many_rows
 from pinlight.catalogue.predicting import preferred
 from pinlight.catalogue.tables import Companion, Diameter, Edition, Magnitude, Star
 from pinlight.diameters.limb_darkening import coefficients
@@ -151,7 +152,8 @@ def write_edition(connection: Connection, folder: Path) -> tuple[str, dict[str, 
     CatalogueError
         If the folder cannot be written.
     """
-    columns, facts = _read_columns(connection)
+    with many_rows():
+        columns, facts = _read_columns(connection)
     full_hash = content_hash(columns, facts)
     name = full_hash[:12]
     manifest = {"format": _FORMAT, "name": name, "hash": full_hash, **facts}

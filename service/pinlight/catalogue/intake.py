@@ -16,20 +16,28 @@ import numpy as np
 from sqlalchemy import Connection, insert, select, update
 
 from pinlight.catalogue.changes import Changing
-from pinlight.catalogue.database import bulk_insert, rows_in
+from pinlight.catalogue.database import bulk_insert, many_rows, rows_in
 from pinlight.catalogue.mapping import ColumnMap, Rows, check_zero_points, find_columns, read_rows
 from pinlight.catalogue.matching import MATCH_ARCSEC, Match, Matcher, known_keys, move_each
 from pinlight.catalogue.names import name_key, short_keys
-from pinlight.catalogue.predicting import NEIGHBOUR_ARCSEC, or_none, preferred, renew_diameters
+from pinlight.catalogue.predicting import (
+    NEIGHBOUR_ARCSEC,
+    UNUSABLE,
+    first_diameters,
+    or_none,
+    preferred,
+    renew_diameters,
+)
 from pinlight.catalogue.tablefile import TableFile, open_table
 from pinlight.catalogue.tables import Change, Companion, Identifier, Intake, Magnitude, Reject, Source, Star
+from pinlight.diameters.prediction import StarPhotometry
 from pinlight.diameters.spectral import parse_spectral_type
 from pinlight.errors import InputError
 from pinlight.photometry.bands import default_errors
 from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.ranking.columns import FLAGS
 from pinlight.sky.cells import cells_of
-from pinlight.sky.positions import unit_vectors
+from pinlight.sky.positions import galactic_latitude_deg, unit_vectors
 
 if TYPE_CHECKING:
     from pinlight.catalogue.store import Catalogue
@@ -268,7 +276,8 @@ class _Batch:
     def write(self, rows: Rows, report: IntakeReport) -> None:
         first = report.rows
         detail = {"intake": self.intake["id"], "file": self.intake["file"], "rows": [first, first + len(rows)]}
-        with self.catalogue.changing("intake", "editor", "take in a table", detail) as change:
+        changing = self.catalogue.changing("intake", "editor", "take in a table", detail)
+        with many_rows(), changing as change:
             connection = change.connection
             state = connection.execute(select(Intake.__table__).where(Intake.id == self.intake["id"])).one()
             if state.rows_done != first:
@@ -282,10 +291,11 @@ class _Batch:
             kept = [index for index in range(len(rows)) if index not in rows.reasons]
             self._fill(change, rows, match, [index for index in kept if not new[index]])
             self._names(change, rows, match, new)
-            touched = self._magnitudes(change, rows, match)
+            touched = self._magnitudes(change, rows, match, new)
             self._companions(change, rows, match)
             self._neighbours(change, match.star_ids[new])
-            renew_diameters(change, {int(match.star_ids[i]) for i in kept if new[i] or i in touched})
+            self._first_diameters(change, rows, match, new)
+            renew_diameters(change, {int(match.star_ids[i]) for i in touched if not new[i]})
             self._rejects(connection, rows)
             added, refused = int(new.sum()), len(rows.reasons)
             connection.execute(
@@ -429,6 +439,7 @@ class _Batch:
         kept = [index for index in range(len(rows)) if index not in rows.reasons]
         old = sorted({key for index in kept if not new[index] for key in rows.keyed[index]})
         known = known_keys(change.connection, old) if old else {}
+        change_id, source_id = change.id, self.source_id
 
         def lines() -> Any:
             for index in kept:
@@ -445,7 +456,7 @@ class _Batch:
                 for key, (name, short_) in every.items():
                     yield {
                         "star_id": star_id, "name": name, "key": key, "short": short_,
-                        "source_id": self.source_id, "change_id": change.id,
+                        "source_id": source_id, "change_id": change_id,
                     }  # fmt: skip
 
         bulk_insert(change.connection, Identifier, lines())
@@ -454,38 +465,36 @@ class _Batch:
     def _place(rows: Rows, index: int) -> tuple[float, float]:
         return float(rows.numbers["ra_deg"][index]), float(rows.numbers["dec_deg"][index])
 
-    def _magnitudes(self, change: Changing, rows: Rows, match: Match) -> set[int]:
+    def _magnitudes(self, change: Changing, rows: Rows, match: Match, new: Any) -> set[int]:
         """Magnitudes of this source; returns the rows whose stars got new or other ones."""
         by_star = {int(match.star_ids[i]): i for i in range(len(rows)) if i not in rows.reasons}
+        old = sorted(star_id for star_id, index in by_star.items() if not new[index])
         query = select(Magnitude.__table__).where(Magnitude.source_id == self.source_id)
         known = {
             (row.star_id, row.band): row._mapping
-            for row in rows_in(change.connection, query, Magnitude.star_id, sorted(by_star))
+            for row in rows_in(change.connection, query, Magnitude.star_id, old)
         }
+        change_id, source_id = change.id, self.source_id
         fresh, pairs, touched = [], [], set()
         for band in CATALOGUE_BANDS:
             if band not in rows.numbers:
                 continue
-            values = rows.numbers[band]
-            given = rows.number(f"{band}_error")
-            assumed = ~(given > 0)
-            errors = np.where(assumed, default_errors(band, values), given)
-            letters = rows.texts.get(f"{band}_quality")
-            lists = values.round(6).tolist(), errors.round(6).tolist(), assumed.tolist()
+            values, errors, assumed, letters = (list(part) for part in self._band(rows, band))
             for star_id, index in by_star.items():
-                value = lists[0][index]
+                value = values[index]
                 if value != value:
                     continue
                 row = {
                     "value": value,
-                    "error": lists[1][index],
-                    "error_assumed": lists[2][index],
-                    "quality": letters[index] if letters else "",
+                    "error": errors[index],
+                    "error_assumed": assumed[index],
+                    "quality": letters[index],
                 }
-                before = known.get((star_id, band))
+                before = known.get((star_id, band)) if known else None
                 if before is None:
-                    key = {"star_id": star_id, "band": band, "source_id": self.source_id}
-                    fresh.append(key | row | {"chosen": False, "change_id": change.id})
+                    row |= {"star_id": star_id, "band": band, "source_id": source_id}
+                    row |= {"chosen": False, "change_id": change_id}
+                    fresh.append(row)
                     touched.add(index)
                 elif any(before[name] != row[name] for name in row):
                     pairs.append((before, row))
@@ -493,6 +502,40 @@ class _Batch:
         bulk_insert(change.connection, Magnitude, fresh)
         change.overwrite(Magnitude, pairs)
         return touched
+
+    @staticmethod
+    def _band(rows: Rows, band: str) -> tuple[list[float], list[float], list[bool], list[str]]:
+        """Magnitudes of a band, their errors, whether these are assumed, and quality letters."""
+        values, given = rows.numbers[band], rows.number(f"{band}_error")
+        assumed = ~(given > 0)
+        errors = np.where(assumed, default_errors(band, values), given)
+        letters = rows.texts.get(f"{band}_quality") or [""] * len(rows)
+        return values.round(6).tolist(), errors.round(6).tolist(), assumed.tolist(), letters
+
+    def _first_diameters(self, change: Changing, rows: Rows, match: Match, new: Any) -> None:
+        """Diameters of stars that came with these rows: their only photometry is at hand."""
+        which = np.flatnonzero(new)
+        if not len(which):
+            return
+        magnitudes = np.full((len(which), len(CATALOGUE_BANDS)), np.nan)
+        errors = magnitudes.copy()
+        for column, band in enumerate(CATALOGUE_BANDS):
+            if band in rows.numbers:
+                values, stated, assumed, letters = (np.asarray(part)[which] for part in self._band(rows, band))
+                usable = [letter[:1].upper() not in UNUSABLE for letter in letters]
+                magnitudes[:, column] = np.where(usable, values, np.nan)
+                errors[:, column] = np.where(assumed, np.nan, stated)
+        ra, dec = rows.numbers["ra_deg"][which], rows.numbers["dec_deg"][which]
+        types = rows.texts.get("spectral_type")
+        photometry = StarPhotometry.of(
+            CATALOGUE_BANDS,
+            magnitudes,
+            errors,
+            [types[index] for index in which.tolist()] if types else [""] * len(which),
+            rows.number("parallax_mas")[which].round(6),
+            galactic_latitude_deg(ra, dec),
+        )
+        first_diameters(change, match.star_ids[which].tolist(), photometry)
 
     def _companions(self, change: Changing, rows: Rows, match: Match) -> None:
         if "separation_arcsec" not in rows.numbers:

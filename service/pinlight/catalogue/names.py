@@ -51,9 +51,12 @@ def name_key(name: str) -> str:
     >>> name_key("hd 010700"), name_key("HD10700")
     ('hd10700', 'hd10700')
     """
-    text = unicodedata.normalize("NFKC", name).casefold()
-    for letter, written in _LETTERS.items():
-        text = text.replace(letter, written)
+    if name.isascii():  # most names by far, and a table may have millions
+        text = name.lower()
+    else:
+        text = unicodedata.normalize("NFKC", name).casefold()
+        for letter, written in _LETTERS.items():
+            text = text.replace(letter, written)
     text = re.sub(r"^\s*(v\*|\*\*?|name\b)", "", text)
     key = re.sub(r"[\s_*,'’]", "", text)
     if match := _NUMBERED.fullmatch(key):

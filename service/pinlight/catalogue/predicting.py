@@ -17,7 +17,7 @@ from pinlight.photometry.bands import BANDS
 from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.sky.positions import galactic_latitude_deg
 
-__all__ = ["NEIGHBOUR_ARCSEC", "UNUSABLE", "or_none", "preferred", "renew_diameters"]
+__all__ = ["NEIGHBOUR_ARCSEC", "UNUSABLE", "first_diameters", "or_none", "preferred", "renew_diameters"]
 
 Floats = NDArray[np.float64]
 
@@ -103,6 +103,13 @@ def _photometry(connection: Connection, star_ids: Sequence[int]) -> StarPhotomet
         np.array([star.parallax_mas for star in stars], dtype=float),
         galactic_latitude_deg(ra, dec),
     )
+
+
+def first_diameters(change: Changing, star_ids: Sequence[int], photometry: StarPhotometry) -> None:
+    """Predict the diameters of stars that have none yet."""
+    rows = diameter_rows(predict_diameters(photometry, load_relations()), star_ids)
+    change_id = change.id
+    bulk_insert(change.connection, Diameter, (row | {"change_id": change_id} for row in rows))
 
 
 def renew_diameters(change: Changing, star_ids: Iterable[int]) -> int:

@@ -14,6 +14,8 @@ from pinlight.photometry.extinction import relative_extinction
 
 __all__ = ["diameter_rows", "explain_diameter"]
 
+_ENCODER = json.JSONEncoder(separators=(",", ":"))
+
 
 def diameter_rows(diameters: Diameters, star_ids: Iterable[int]) -> Iterator[dict[str, Any]]:
     """Rows of the table of diameters, one for each star."""
@@ -50,7 +52,7 @@ def diameter_rows(diameters: Diameters, star_ids: Iterable[int]) -> Iterator[dic
             "culprit": diameters.culprit_name(row),
             "luminosity_group": groups[row],
             "relation_set": diameters.relation_set.hash,
-            "parts": json.dumps(parts, separators=(",", ":")),
+            "parts": _ENCODER.encode(parts),
         }
 
 
