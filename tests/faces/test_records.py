@@ -358,3 +358,19 @@ def test_a_copy_by_command(path, tmp_path):
     assert out == "copied 74733 stars, 1 changes, 1 editions\n"
     assert run("edition", "check", "--db", str(tmp_path / "copy.db")).stdout.endswith("as its hash says\n")
     assert "name another place" in run("copy", path, path, code=2).stderr
+
+
+def test_bundles_by_command(path, tmp_path):
+    run("standing", "set", "tau Cet", "barred", "--reason", "a disc", "--db", path)
+    bundle = tmp_path / "ours.jsonl"
+    run("standing", "export", "--output", str(bundle), "--db", path)
+    assert run("standing", "export", "--db", path).stdout == bundle.read_text(encoding="utf-8")
+    run("copy", path, str(tmp_path / "other.db"))
+    other = str(tmp_path / "other.db")
+    assert run("standing", "import", str(bundle), "--db", other).stdout == "0 standings added, 1 known\n"
+    run("standing", "set", "tau Cet", "vouched", "--reason", "no disc", "--db", other)
+    run("standing", "export", "--output", str(bundle), "--db", other)
+    out = run("standing", "import", str(bundle), "--db", path).stdout
+    assert "1 standings added, 1 known" in out
+    assert "tau Cet: both are kept, theirs counts" in out
+    assert "cannot read" in run("standing", "import", str(tmp_path / "none"), "--db", path, code=2).stderr

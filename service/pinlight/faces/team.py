@@ -1,11 +1,12 @@
 """Commands of the team: members, standings, editions, the change log."""
 
 import json
+from pathlib import Path
 from typing import Any
 
 import click
 
-from pinlight.errors import InputError
+from pinlight.errors import InputError, PinlightError
 from pinlight.faces.options import as_json, db, print_json, say, token
 
 __all__ = ["changes", "copy", "edition", "member", "standing"]
@@ -194,6 +195,55 @@ def history(star: str, db: str | None, as_json: bool) -> None:
         for one in row["evidence"]:
             click.echo(f"    {one if isinstance(one, str) else json.dumps(one, ensure_ascii=False)}")
     click.echo(f"what counts: {found['standing'] or 'no general standing'}")
+
+
+@standing.command("export")
+@click.option("--output", type=click.Path(path_type=Path), help="Write the bundle here; printed by default.")
+@click.option("--all-stars", is_flag=True, help="With all stars that were added, judged or not.")
+@db
+def export_(output: Path | None, all_stars: bool, db: str | None) -> None:
+    """A bundle of all standings, to carry to another site."""
+    from pinlight.catalogue.bundles import export_bundle
+    from pinlight.catalogue.store import open_catalogue
+
+    text = export_bundle(open_catalogue(db), all_stars=all_stars)
+    if output is None:
+        click.echo(text, nl=False)
+        return
+    try:
+        output.write_text(text, encoding="utf-8", newline="")
+    except OSError as error:
+        raise PinlightError(f"cannot write {output}: {error.strerror}") from error
+    click.echo(f"wrote {output}", err=True)
+
+
+@standing.command("import")
+@click.argument("file", type=click.Path(path_type=Path))
+@db
+@token
+@as_json
+def import_(file: Path, db: str | None, token: str | None, as_json: bool) -> None:
+    """Take in the bundle FILE of another site; twice changes nothing, and any order will do."""
+    from pinlight.catalogue.bundles import import_bundle
+    from pinlight.catalogue.store import open_catalogue
+
+    try:
+        text = file.read_bytes().decode()
+    except (OSError, UnicodeDecodeError) as error:
+        raise InputError(f"cannot read {file}: {error}") from error
+    report = import_bundle(open_catalogue(db, token=token), text)
+    if as_json:
+        print_json(report)
+        return
+    click.echo(f"{report['standings_added']} standings added, {report['standings_known']} known")
+    if report["stars_added"] or report["magnitudes_added"]:
+        click.echo(f"{report['stars_added']} stars and {report['magnitudes_added']} magnitudes added")
+    for one in report["unknown"]:
+        click.echo(f"left out: line {one['line']}, {one['name']}: {one['reason']}")
+    for one in report["conflicts"]:
+        click.echo(f"{one['name']}: both are kept, {one['counts']} counts")
+        for whose in ("ours", "theirs"):
+            click.echo(f"  {whose:<8}{_standing_line(one[whose] | {'name': ''})}")
 
 
 @click.group()
