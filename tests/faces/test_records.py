@@ -42,6 +42,10 @@ ENDPOINTS = [
     ("GET", "/api/v1/stars/1/changes", None, None),
     ("GET", "/api/v1/changes", None, None),
     ("POST", "/api/v1/intakes", INTAKE, "editor"),
+    ("POST", "/api/v1/stars/1/preferences", {"band": "V", "source": None}, "keeper"),
+    ("POST", "/api/v1/stars/9/mergers", {"into_id": 8}, "keeper"),
+    ("POST", "/api/v1/stars/1/splits", {"source": "none", "name": "none"}, "keeper"),
+    ("POST", "/api/v1/changes/1/undo", None, "keeper"),
     ("GET", "/api/v1/editions", None, None),
     ("POST", "/api/v1/editions", None, "keeper"),
     ("GET", "/api/v1/editions/EDITION", None, None),
@@ -91,7 +95,7 @@ def expected(where, who, needs):
         return 401
     if needs and ROLES.index(who) < ROLES.index(needs):
         return 403
-    return (200, 201) if needs else 200
+    return (200, 201, 400, 404) if needs else 200  # what is done twice, or is not there, is told so
 
 
 @pytest.mark.parametrize("where", ["open", "closed"])
@@ -121,7 +125,12 @@ def rules(team, under_api):
 
 def test_the_table_has_every_endpoint(team):
     in_table = {
-        (method, path.replace("/stars/1", "/stars/<int:star_id>").replace("EDITION", "<name>"))
+        (
+            method,
+            re.sub(r"/stars/\d", "/stars/<int:star_id>", path)
+            .replace("/changes/1", "/changes/<int:change_id>")
+            .replace("EDITION", "<name>"),
+        )
         for method, path, _, _ in ENDPOINTS
     }
     assert rules(team, True) == in_table
@@ -374,3 +383,19 @@ def test_bundles_by_command(path, tmp_path):
     assert "1 standings added, 1 known" in out
     assert "tau Cet: both are kept, theirs counts" in out
     assert "cannot read" in run("standing", "import", str(tmp_path / "none"), "--db", path, code=2).stderr
+
+
+def test_corrections_over_http_and_by_command(team, path):
+    merged = ask(team, "open", "keeper", "POST", "/api/v1/stars/21/mergers", {"into_id": 20})
+    change = models.CorrectionAnswer.model_validate(merged.json).change_id
+    assert ask(team, "open", "none", "GET", "/api/v1/stars/21").json["star_id"] == 20
+    undone = ask(team, "open", "keeper", "POST", f"/api/v1/changes/{change}/undo")
+    assert undone.status_code == 201
+    assert ask(team, "open", "none", "GET", "/api/v1/stars/21").json["star_id"] == 21
+    assert ask(team, "open", "keeper", "POST", f"/api/v1/changes/{2**70}/undo").status_code == 404
+    out = run("merge", "21", "20", "--db", path).stdout
+    assert "21 is part of 20 now" in out
+    assert "is undone" in run("undo", re.search(r"undo (\d+)", out)[1], "--db", path).stdout
+    assert "it was so already" in run("prefer", "tau Cet", "V", "--db", path).stdout
+    refused = run("split", "tau Cet", "--source", "none", "--name", "X 1", "--db", path, code=2)
+    assert "the catalogue has no such source" in refused.stderr

@@ -199,6 +199,20 @@ def star_changes(connection: Connection, star_id: int) -> list[dict[str, Any]]:
     ]
 
 
+def _moved_away(connection: Connection, table: Table, lines: list[Any], last: int) -> list[dict[str, Any]]:
+    """Rows that were the star's after the change `last`, and are another's since."""
+    found = []
+    for line in lines:
+        after = json.loads(line.after)
+        if line.table_name == table.name and line.change_id > last and "star_id" in after:
+            key = dict(zip([column.name for column in table.primary_key], line.row_key.split("/"), strict=True))
+            key |= {name: value for name, value in after.items() if name in key}
+            typed = {name: value if name == "band" else int(value) for name, value in key.items()}
+            query = select(table).where(*(table.c[name] == value for name, value in typed.items()))
+            found += [dict(row) for row in connection.execute(query).mappings()]
+    return found
+
+
 def star_then(connection: Connection, star_id: int, at_utc: str) -> dict[str, Any]:
     """A star's rows as they stood at a past time, each value with who set it and when.
 
@@ -236,14 +250,13 @@ def star_then(connection: Connection, star_id: int, at_utc: str) -> dict[str, An
     used: set[int] = set()
     for mapped in _TABLES:
         table: Table = mapped.__table__
-        for row in _rows_of(connection, table, star_id):
+        for row in [*_rows_of(connection, table, star_id), *_moved_away(connection, table, lines, last)]:
             added_by = row["change_id"]
             if added_by > last:
                 continue
             setter = dict.fromkeys(row, added_by)
-            own = [
-                line for line in lines if line.table_name == table.name and line.row_key == _row_key(table, row)
-            ]
+            keys = {_row_key(table, row), _row_key(table, row | {"star_id": star_id})}
+            own = [line for line in lines if line.table_name == table.name and line.row_key in keys]
             for line in own:
                 if line.change_id <= last:
                     setter |= dict.fromkeys(json.loads(line.after), line.change_id)

@@ -14,7 +14,7 @@ from sqlalchemy import Connection, insert, select
 
 from pinlight.catalogue.changes import Changing
 from pinlight.catalogue.database import many_rows
-from pinlight.catalogue.predicting import preferred
+from pinlight.catalogue.predicting import merged_stars, preferred
 from pinlight.catalogue.tables import Companion, Diameter, Edition, Magnitude, Star
 from pinlight.diameters.limb_darkening import coefficients
 from pinlight.diameters.oblateness import oblateness_bound
@@ -39,11 +39,12 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
     star = select(
         Star.id, Star.name, Star.ra_deg, Star.dec_deg, Star.spectral_type, Star.flags, Star.cell,
         Star.pm_ra_mas_yr, Star.pm_dec_mas_yr, Star.parallax_mas, Star.radial_velocity_km_s,
-    ).order_by(Star.id)  # fmt: skip
+    ).where(Star.merged_into.is_(None)).order_by(Star.id)  # fmt: skip
     rows: list[Any] = list(connection.execute(star))
     ids = _column(rows, 0, "i8")
     place = {int(star_id): index for index, star_id in enumerate(ids)}
     count = len(ids)
+    merged = merged_stars(connection)
     columns: dict[str, NDArray[Any]] = {
         "ids": ids,
         "names": np.array([row[1].encode() for row in rows], dtype="S"),
@@ -61,7 +62,7 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
     for band in CATALOGUE_BANDS:
         columns[f"magnitude_{band}"] = np.full(count, np.nan, dtype=np.float32)
         columns[f"magnitude_error_{band}"] = np.full(count, np.nan, dtype=np.float32)
-    for (star_id, band), row in preferred(connection.execute(select(Magnitude.__table__))).items():
+    for (star_id, band), row in preferred(connection.execute(select(Magnitude.__table__)), merged).items():
         if band in CATALOGUE_BANDS:
             columns[f"magnitude_{band}"][place[star_id]] = row.value
             columns[f"magnitude_error_{band}"][place[star_id]] = row.error
@@ -71,7 +72,7 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
         Diameter.teff_k, Diameter.logg, Diameter.spectral_code, Diameter.discordant, Diameter.parts,
         Diameter.relation_set,
     ).order_by(Diameter.star_id)  # fmt: skip
-    rows = list(connection.execute(diameter))
+    rows = [row for row in connection.execute(diameter) if row[0] not in merged]
     at = np.array([place[row[0]] for row in rows], dtype=np.int64)
 
     def spread(values: NDArray[Any], kind: str) -> NDArray[Any]:
@@ -105,10 +106,20 @@ def _read_columns(connection: Connection) -> tuple[dict[str, NDArray[Any]], dict
     columns["cell_centres"] = cell_centres().round(12)
 
     companion = select(
-        Companion.star_id, Companion.separation_arcsec, Companion.delta_v_mag, Companion.delta_ks_mag
+        Companion.star_id,
+        Companion.separation_arcsec,
+        Companion.delta_v_mag,
+        Companion.delta_ks_mag,
+        Companion.neighbour_id,
     ).order_by(Companion.star_id, Companion.separation_arcsec, Companion.id)
-    rows = list(connection.execute(companion))
-    at = row_of[[place[row[0]] for row in rows]] if rows else np.empty(0, dtype=np.int64)
+    # Of a neighbour that is another entry of the same star, or of one counted already, nothing is said.
+    rows = [
+        row
+        for row in connection.execute(companion)
+        if row[4] not in merged and (row[4] is None or merged.get(row[0]) != row[4])
+    ]
+    stars = [place[merged.get(row[0], row[0])] for row in rows]
+    at = row_of[stars] if rows else np.empty(0, dtype=np.int64)
     by_row = np.argsort(at, kind="stable")
     columns["companion_rows"] = at[by_row]
     for index, name in ((1, "separation"), (2, "delta_V"), (3, "delta_Ks")):

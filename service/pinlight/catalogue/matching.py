@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 from sqlalchemy import Connection, select
 
 from pinlight.catalogue.mapping import Rows
+from pinlight.catalogue.predicting import merged_stars
 from pinlight.catalogue.tables import Star
 from pinlight.sky.positions import move_to_epoch, separation_deg, unit_vectors
 
@@ -65,9 +66,11 @@ class Matcher:
         self.ids = np.empty(0, dtype=np.int64)
         self._place = np.empty((0, 6))
         self._trees: list[_Tree] = []
+        self._merged: dict[int, int] = {}
 
     def refresh(self, connection: Connection) -> None:
         """Take in the stars that were added since, whoever added them."""
+        self._merged = merged_stars(connection)
         newest = int(self.ids[-1]) if len(self.ids) else 0
         columns = (
             Star.id, Star.ra_deg, Star.dec_deg, Star.pm_ra_mas_yr, Star.pm_dec_mas_yr, Star.parallax_mas,
@@ -120,13 +123,17 @@ class Matcher:
             index = int(good[position])
             if index in reasons or star_ids[index]:
                 continue
-            stars = self.ids[near[position, hits[position]]]
+            stars = {self._root(star) for star in self.ids[near[position, hits[position]]].tolist()}
             if len(stars) > 1:
                 ids = ", ".join(map(str, sorted(stars)))
                 reasons[index] = f"stars {ids} are all within {self.match_arcsec:g} arcsec; give it a name"
             else:
-                star_ids[index], by_place[index] = stars[0], True
+                star_ids[index], by_place[index] = stars.pop(), True
         return Match(star_ids, by_place, reasons)
+
+    def _root(self, star_id: int) -> int:
+        """The entry that stands for a star."""
+        return self._merged.get(star_id, star_id)
 
     def neighbours(self, star_ids: NDArray[np.int64], within_arcsec: float) -> list[tuple[int, int, float]]:
         """Pairs of some stars with any others near them at epoch 2000: ids and separation. [arcsec]"""
@@ -159,7 +166,7 @@ class Matcher:
         bearers = known_keys(connection, sorted({key for found in keys.values() for key in found}))
         found: dict[int, int] = {}
         for index, own in keys.items():
-            stars = {star for key in own for star in bearers.get(key, ())}
+            stars = {self._root(star) for key in own for star in bearers.get(key, ())}
             if len(stars) == 1:
                 found[index] = stars.pop()
             elif stars:

@@ -1,6 +1,6 @@
 """Which magnitude of several counts, and the diameters that follow from them."""
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 import numpy as np
@@ -10,6 +10,7 @@ from sqlalchemy import Connection, select
 from pinlight.catalogue.changes import Changing
 from pinlight.catalogue.database import bulk_insert, rows_in
 from pinlight.catalogue.recompute import diameter_rows
+from pinlight.catalogue.standings import must_exist
 from pinlight.catalogue.tables import Diameter, Magnitude, Star
 from pinlight.diameters.prediction import StarPhotometry, predict_diameters
 from pinlight.diameters.relations import load_relations
@@ -17,7 +18,16 @@ from pinlight.photometry.bands import BANDS
 from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.sky.positions import galactic_latitude_deg
 
-__all__ = ["NEIGHBOUR_ARCSEC", "UNUSABLE", "first_diameters", "or_none", "preferred", "renew_diameters"]
+__all__ = [
+    "NEIGHBOUR_ARCSEC",
+    "UNUSABLE",
+    "first_diameters",
+    "merged_stars",
+    "or_none",
+    "preferred",
+    "renew_diameters",
+    "root_of",
+]
 
 Floats = NDArray[np.float64]
 
@@ -33,7 +43,26 @@ def or_none(values: Floats) -> list[float | None]:
     return [None if value != value else value for value in values.tolist()]  # NaN is not itself
 
 
-def preferred(rows: Iterable[Any]) -> dict[tuple[int, str], Any]:
+def merged_stars(connection: Connection) -> dict[int, int]:
+    """Entries that another stands for, and which."""
+    rows = connection.execute(select(Star.id, Star.merged_into).where(Star.merged_into.is_not(None)))
+    return {row.id: row.merged_into for row in rows}
+
+
+def root_of(connection: Connection, star_id: int) -> int:
+    """The entry that stands for a star: itself, unless it is part of another.
+
+    Raises
+    ------
+    NotFoundError
+        If there is no such star.
+    """
+    must_exist(connection, star_id)
+    merged = connection.execute(select(Star.merged_into).where(Star.id == star_id)).scalar()
+    return star_id if merged is None else int(merged)
+
+
+def preferred(rows: Iterable[Any], merged: Mapping[int, int] | None = None) -> dict[tuple[int, str], Any]:
     """Of each star's magnitudes in a band the one that counts.
 
     A keeper's choice comes first. Else letters that say it is no measurement leave it out;
@@ -43,6 +72,8 @@ def preferred(rows: Iterable[Any]) -> dict[tuple[int, str], Any]:
     Parameters
     ----------
     rows : records with star_id, band, value, error, error_assumed, quality, chosen, source_id
+    merged : mapping, optional
+        Of `merged_stars`: magnitudes of an entry count for the one that stands for it.
 
     Returns
     -------
@@ -55,7 +86,7 @@ def preferred(rows: Iterable[Any]) -> dict[tuple[int, str], Any]:
         quality = row.quality[:1].upper()
         if quality in UNUSABLE and not row.chosen:
             continue
-        key = (row.star_id, row.band)
+        key = (merged.get(row.star_id, row.star_id) if merged else row.star_id, row.band)
         if key not in best:
             best[key] = row
             continue
@@ -88,8 +119,9 @@ def _photometry(connection: Connection, star_ids: Sequence[int]) -> StarPhotomet
     stars = [found[star_id] for star_id in star_ids]
     magnitudes = np.full((len(star_ids), len(CATALOGUE_BANDS)), np.nan)
     errors = magnitudes.copy()
-    query = select(Magnitude.__table__)
-    for (star_id, band), row in preferred(rows_in(connection, query, Magnitude.star_id, star_ids)).items():
+    merged = {child: star_id for child, star_id in merged_stars(connection).items() if star_id in place}
+    query, every = select(Magnitude.__table__), [*star_ids, *merged]
+    for (star_id, band), row in preferred(rows_in(connection, query, Magnitude.star_id, every), merged).items():
         if band in CATALOGUE_BANDS:
             at = place[star_id], CATALOGUE_BANDS.index(band)
             # An error that was assumed is left to the prediction, which knows more of its making.

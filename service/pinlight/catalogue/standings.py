@@ -5,7 +5,7 @@ import uuid
 from collections.abc import Iterable
 from typing import TYPE_CHECKING, Any
 
-from sqlalchemy import Connection, insert, select
+from sqlalchemy import Connection, func, insert, or_, select
 
 from pinlight.catalogue.tables import Standing, Star
 from pinlight.errors import InputError, NotFoundError
@@ -136,14 +136,20 @@ def public_standing(row: dict[str, Any]) -> dict[str, Any]:
 
 
 def standing_rows(connection: Connection, star_id: int | None = None) -> list[dict[str, Any]]:
-    """All standings, or those of one star, in the order in which they were made."""
-    query = select(Standing.__table__)
+    """All standings, or those of one star, in the order in which they were made.
+
+    Those of an entry that another stands for are the other's.
+    """
+    query = select(Standing.__table__, func.coalesce(Star.merged_into, Star.id).label("counts_for"))
+    query = query.join(Star, Star.id == Standing.star_id)
     if star_id is not None:
-        query = query.where(Standing.star_id == star_id)
+        query = query.where(or_(Star.id == star_id, Star.merged_into == star_id))
     rows = connection.execute(query).mappings().all()
     # Not by id: a standing that came late from another site takes its place by when it was made.
     ordered = sorted(rows, key=lambda row: (row["made_utc"], row["uid"]))
-    return [dict(row) | {"evidence": json.loads(row["evidence"])} for row in ordered]
+    return [
+        dict(row) | {"evidence": json.loads(row["evidence"]), "star_id": row["counts_for"]} for row in ordered
+    ]
 
 
 def standings_for(

@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from sqlalchemy import Connection, Engine, func, or_, select
+from sqlalchemy.orm import aliased
 
 from pinlight.catalogue.changes import Changing, latest_change, recent_changes, star_changes, star_then
 from pinlight.catalogue.database import (
@@ -25,7 +26,7 @@ from pinlight.catalogue.database import (
 from pinlight.catalogue.editions import open_edition, record_edition
 from pinlight.catalogue.members import Person, person_of
 from pinlight.catalogue.names import key_beginnings, name_key
-from pinlight.catalogue.predicting import preferred
+from pinlight.catalogue.predicting import merged_stars, preferred, root_of
 from pinlight.catalogue.recompute import explain_diameter
 from pinlight.catalogue.standings import (
     STANDINGS,
@@ -267,13 +268,19 @@ class Catalogue:
         ]
 
     def _bearers(self, key: str) -> Sequence[Any]:
+        """The stars that bear a key, each once; an entry that another stands for is the other."""
+        entry = aliased(Star)
         query = (
             select(Star.id, Star.name, Identifier.name.label("identifier"), Identifier.short)
-            .join(Identifier, Identifier.star_id == Star.id)
+            .join(entry, Star.id == func.coalesce(entry.merged_into, entry.id))
+            .join(Identifier, Identifier.star_id == entry.id)
             .where(Identifier.key == key)
         )
         with self.reading() as connection:
-            return sorted(connection.execute(query), key=lambda row: (row.name, row.id))
+            rows = sorted(
+                connection.execute(query), key=lambda row: (row.name, row.id, row.short, row.identifier)
+            )
+        return list({row.id: row for row in reversed(rows)}.values())[::-1]
 
     def _plain_name(self, star_id: int, name: str) -> str:
         """A star's name, with a catalogue number beside it where case alone tells it from another's."""
@@ -302,7 +309,10 @@ class Catalogue:
     ) -> dict[int, str]:
         """The standing that counts of every star that has one; see `standings.standings_for`."""
         with self.reading() as connection:
-            return standings_for(standing_rows(connection), band, mode, array)
+            found = standings_for(standing_rows(connection), band, mode, array)
+            # An older edition may still have an entry of its own for a star that is part of another now.
+            merged = merged_stars(connection) if found else {}
+        return found | {entry: found[star] for entry, star in merged.items() if star in found}
 
     def set_standing(self, star_id: int, standing: str, reason: str, **options: Any) -> dict[str, Any]:
         """Add a judgement of a star; see `standings.set_standing`."""
@@ -317,7 +327,7 @@ class Catalogue:
             If there is no such star.
         """
         with self.reading() as connection:
-            must_exist(connection, star_id)
+            star_id = root_of(connection, star_id)
             rows = standing_rows(connection, star_id)
         return {
             "star_id": star_id,
@@ -384,27 +394,31 @@ class Catalogue:
         with self.reading() as connection:
 
             def rows(*columns: Any, table: Any, order: Any = None) -> list[dict[str, Any]]:
-                query = select(*columns).where(table.star_id == star_id).order_by(order)
+                query = select(*columns).where(table.star_id.in_(group)).order_by(order)
                 return [dict(row) for row in connection.execute(query).mappings()]
 
-            star = connection.execute(select(Star.__table__).where(Star.id == star_id)).mappings().first()
-            if star is None:
-                raise NotFoundError(f"star_id is {star_id}; there is no such star")
+            star_id = root_of(connection, star_id)
+            star = connection.execute(select(Star.__table__).where(Star.id == star_id)).mappings().one()
+            entries = connection.execute(select(Star.id, Star.name).where(Star.merged_into == star_id)).all()
+            group = [star_id, *(row.id for row in entries)]
             sources = {row.id: row for row in connection.execute(select(Source.__table__))}
             names = rows(Identifier.name, Identifier.short, table=Identifier, order=Identifier.id)
-            query = select(Magnitude.__table__).where(Magnitude.star_id == star_id)
+            query = select(Magnitude.__table__).where(Magnitude.star_id.in_(group))
             magnitudes = connection.execute(query.order_by(Magnitude.source_id)).all()
             companions = rows(
                 Companion.neighbour_id, Companion.separation_arcsec, Companion.delta_v_mag,
                 Companion.delta_ks_mag, table=Companion, order=Companion.separation_arcsec,
             )  # fmt: skip
-            diameter = rows(Diameter.__table__, table=Diameter)
+            companions = [row for row in companions if row["neighbour_id"] not in group]
+            diameter = [row for row in rows(Diameter.__table__, table=Diameter) if row["star_id"] == star_id]
             standings = standing_rows(connection, star_id)
             neighbours = [row["neighbour_id"] for row in companions]
             named = connection.execute(select(Star.id, Star.name).where(Star.id.in_(neighbours)))
             neighbour_names = {row.id: row.name for row in named}
         identifiers = dict.fromkeys(row["name"] for row in names if not row["short"])
-        counting = {band: row for (_, band), row in preferred(magnitudes).items()}
+        counting = {
+            band: row for (_, band), row in preferred(magnitudes, dict.fromkeys(group, star_id)).items()
+        }
 
         def shown(row: Any) -> dict[str, Any]:
             return {
@@ -442,5 +456,6 @@ class Catalogue:
             ) if diameter else None,
             "standing": standings_for(standings).get(star_id),
             "standings": [public_standing(row) for row in standings],
+            "merged": [{"star_id": row.id, "name": row.name} for row in entries],
             "source": sources[star["source_id"]].title,
         }  # fmt: skip

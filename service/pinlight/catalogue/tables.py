@@ -22,7 +22,7 @@ __all__ = [
 ]
 
 # The newest migration; a test holds it against the migrations folder.
-SCHEMA = "0003"
+SCHEMA = "0004"
 
 
 class Base(DeclarativeBase):
@@ -95,7 +95,11 @@ class Source(Base):
 
 
 class Star(Base):
-    """One star; position in ICRS at epoch 2000, `flags` words separated by blanks."""
+    """One star; position in ICRS at epoch 2000, `flags` words separated by blanks.
+
+    `merged_into` is the entry that stands for this one, where the two turned out to be one star;
+    an entry that stands for others is itself part of none.
+    """
 
     __tablename__ = "star"
 
@@ -111,6 +115,7 @@ class Star(Base):
     object_type: Mapped[str]
     flags: Mapped[str]
     cell: Mapped[int] = mapped_column(index=True)
+    merged_into: Mapped[int | None] = mapped_column(ForeignKey("star.id"), index=True)
     source_id: Mapped[int] = mapped_column(ForeignKey("source.id"))
     change_id: Mapped[int] = mapped_column(ForeignKey("change.id"))
 

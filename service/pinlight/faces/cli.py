@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from pinlight.errors import InputError, NotFoundError, PinlightError
-from pinlight.faces import team
+from pinlight.faces import curate, team
 from pinlight.faces.add import add
 from pinlight.faces.options import as_json as _as_json
 from pinlight.faces.options import db as _db
@@ -108,7 +108,18 @@ def main() -> None:
     """
 
 
-for _command in (add, team.member, team.standing, team.edition, team.changes, team.copy):
+for _command in (
+    add,
+    team.member,
+    team.standing,
+    team.edition,
+    team.changes,
+    team.copy,
+    curate.prefer,
+    curate.merge,
+    curate.split,
+    curate.undo,
+):
     main.add_command(_command)
 
 

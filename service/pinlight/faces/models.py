@@ -11,17 +11,21 @@ __all__ = [
     "ChangesQuestion",
     "ComparisonAnswer",
     "ComparisonQuestion",
+    "CorrectionAnswer",
     "EditionAnswer",
     "EditionCheck",
     "EditionsAnswer",
     "HealthAnswer",
     "IntakeAnswer",
     "IntakeQuestion",
+    "MergerQuestion",
     "PlanAnswer",
     "PlanQuestion",
+    "PreferenceQuestion",
     "Problem",
     "RankingAnswer",
     "RankingQuestion",
+    "SplitQuestion",
     "StandingQuestion",
     "StandingRecord",
     "StandingsAnswer",
@@ -133,6 +137,28 @@ class StandingQuestion(_Question):
     band: str | None = None
     mode: Annotated[str | None, Field(description="MODE or ARRAY/MODE.")] = None
     evidence: Annotated[list[str | dict[str, Any]], Field(max_length=100)] = Field(default_factory=list)
+
+
+class PreferenceQuestion(_Question):
+    """Whose magnitude is to count in a band; null for what the rules say."""
+
+    band: str
+    source: str | None
+
+
+class MergerQuestion(_Question):
+    """The entry that is to stand for both."""
+
+    into_id: int
+
+
+class SplitQuestion(_Question):
+    """Whose contributions are of another star, and what that is called."""
+
+    source: str
+    name: str
+    ra_deg: float | None = None
+    dec_deg: float | None = None
 
 
 class IntakeQuestion(_Question):
@@ -459,6 +485,13 @@ class StarChangesAnswer(_Answer):
     then: StarThen | None = None
 
 
+class CorrectionAnswer(_Answer):
+    """The change in the log, 0 where nothing changed; of a split also the new star."""
+
+    change_id: int
+    star_id: int | None = None
+
+
 class RejectedRow(_Answer):
     line: int
     reason: str
@@ -545,6 +578,7 @@ class StarAnswer(_Answer):
     diameter: StarDiameter | None
     standing: str | None
     standings: list[StandingRecord]
+    merged: list[dict[str, Any]]
     source: str
 
 

@@ -12,17 +12,21 @@ from pinlight.faces.models import (
     ChangesQuestion,
     ComparisonAnswer,
     ComparisonQuestion,
+    CorrectionAnswer,
     EditionAnswer,
     EditionCheck,
     EditionsAnswer,
     HealthAnswer,
     IntakeAnswer,
     IntakeQuestion,
+    MergerQuestion,
     PlanAnswer,
     PlanQuestion,
+    PreferenceQuestion,
     Problem,
     RankingAnswer,
     RankingQuestion,
+    SplitQuestion,
     StandingQuestion,
     StandingRecord,
     StandingsAnswer,
@@ -37,7 +41,17 @@ from pinlight.version import __version__
 
 __all__ = ["describe_api"]
 
-_QUESTIONS = (RankingQuestion, PlanQuestion, StarsQuestion, TargetQuestion, StandingQuestion, IntakeQuestion)
+_QUESTIONS = (
+    RankingQuestion,
+    PlanQuestion,
+    StarsQuestion,
+    TargetQuestion,
+    StandingQuestion,
+    IntakeQuestion,
+    PreferenceQuestion,
+    MergerQuestion,
+    SplitQuestion,
+)
 _ANSWERS = (
     RankingAnswer,
     PlanAnswer,
@@ -52,6 +66,7 @@ _ANSWERS = (
     EditionCheck,
     ComparisonAnswer,
     IntakeAnswer,
+    CorrectionAnswer,
     ArraysAnswer,
     HealthAnswer,
     AliveAnswer,
@@ -244,6 +259,35 @@ def describe_api() -> dict[str, Any]:
                     "summary": "What differs between two editions",
                     "parameters": [name, *_parameters(ComparisonQuestion)],
                     "responses": _responses(ComparisonAnswer, 400, 404),
+                }
+            },
+            **{
+                f"/api/v1/stars/{{star_id}}/{path}": {
+                    "post": {
+                        "operationId": operation,
+                        "summary": f"{summary}; takes a keeper",
+                        "parameters": [star_id],
+                        "requestBody": {
+                            "required": True,
+                            "content": {"application/json": {"schema": _schema(question)}},
+                        },
+                        "responses": _responses(CorrectionAnswer, 400, 403, 404, 413, 415, done="201"),
+                    }
+                }
+                for path, operation, summary, question in (
+                    ("preferences", "preferMagnitude", "Choose whose magnitude counts", PreferenceQuestion),
+                    ("mergers", "mergeStar", "Say that the star is part of another entry", MergerQuestion),
+                    ("splits", "splitStar", "Make what one source brought a star of its own", SplitQuestion),
+                )
+            },
+            "/api/v1/changes/{change_id}/undo": {
+                "post": {
+                    "operationId": "undoChange",
+                    "summary": "Take back a preference, a merger or a split; takes a keeper",
+                    "parameters": [
+                        {"name": "change_id", "in": "path", "required": True, "schema": {"type": "integer"}}
+                    ],
+                    "responses": _responses(CorrectionAnswer, 400, 403, 404, done="201"),
                 }
             },
             "/api/v1/intakes": {

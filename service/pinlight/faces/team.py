@@ -371,7 +371,8 @@ def changes(star: str | None, at: str | None, most: int, db: str | None, as_json
     else:
         for change in found:
             detail = ", ".join(f"{key} {value}" for key, value in change["detail"].items())
-            click.echo(f"{change['made_utc'][:19]}Z  {change['made_by']:<16}{change['action']:<12}{detail}")
+            number = f"{change['change_id']:>6}  {change['made_utc'][:19]}Z"
+            click.echo(f"{number}  {change['made_by']:<16}{change['action']:<12}{detail}")
             for line in change.get("overwritten", []):
                 for column, old in line["before"].items():
                     click.echo(f"    {line['table']} {line['row']} {column}: {old} → {line['after'][column]}")
