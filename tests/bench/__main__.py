@@ -25,6 +25,7 @@ from pinlight.ranking.rank import rank
 from pinlight.ranking.setup import setup_of
 from pinlight.ranking.target import Target
 from pinlight.sky.positions import galactic_latitude_deg
+from tests.bench.page import measure_page
 
 
 def median_s(call: Callable[[], Any], repeats: int = 7) -> float:
@@ -144,6 +145,7 @@ def main() -> None:
         "star by star",
         median_s(one_by_one, 1) * count / sample,
     )
+    measure_page(catalogue)
     show("pinlight --help (process)", command_s("--help"))
     show(
         "pinlight rank (process)",

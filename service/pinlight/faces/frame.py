@@ -77,7 +77,7 @@ def _kind(schema: dict[str, Any]) -> str:
 
 def address_question(values: MultiDict[str, str]) -> dict[str, str]:
     """The question in the address; stations may be given one by one, as a form gives them."""
-    together = MultiDict(values)
+    together = MultiDict((name, value.strip()) for name, value in values.items(multi=True))
     if stations := values.getlist("stations"):
         together["stations"] = ",".join(stations)
     return from_query(together)

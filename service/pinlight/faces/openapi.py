@@ -89,6 +89,7 @@ def _parameters(model: type[BaseModel]) -> list[dict[str, Any]]:
             {
                 "name": name,
                 "in": "query",
+                "allowEmptyValue": True,  # an empty one counts as not given
                 "required": name in schema.get("required", []),
                 "schema": {key: value for key, value in chosen.items() if key != "title"},
             }
@@ -99,6 +100,7 @@ def _parameters(model: type[BaseModel]) -> list[dict[str, Any]]:
 _FORMAT = {
     "name": "format",
     "in": "query",
+    "allowEmptyValue": True,
     "required": False,
     "schema": {"type": "string", "enum": list(FORMATS), "default": "json"},
     "description": "The list as a table for other tools.",
@@ -242,7 +244,7 @@ def describe_api() -> dict[str, Any]:
                 "post": {
                     "operationId": "freezeEdition",
                     "summary": "Freeze the present state; takes a keeper; 200 where it was frozen already",
-                    "responses": _responses(EditionAnswer, 403, done="201"),
+                    "responses": _responses(EditionAnswer, 403) | _responses(EditionAnswer, 403, done="201"),
                 },
             },
             "/api/v1/editions/{name}": {

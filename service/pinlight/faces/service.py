@@ -72,7 +72,7 @@ def from_query(values: MultiDict[str, str]) -> dict[str, str]:
     for name in values:
         if len(values.getlist(name)) > 1:
             raise InputError(f"{name} is given {len(values.getlist(name))} times; give it once")
-    return {name: value for name, value in values.items() if value.strip() and name != "format"}
+    return {name: value for name, value in values.items() if value and name != "format"}
 
 
 def as_asked(answer: dict[str, Any], name: str, make: "Callable[[], Table]") -> dict[str, Any] | Response:
