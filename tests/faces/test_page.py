@@ -1,7 +1,9 @@
 import json
 import re
 from html.parser import HTMLParser
+from pathlib import Path
 
+import numpy as np
 import pytest
 
 import pinlight as pl
@@ -258,3 +260,26 @@ def test_bokehs_script_comes_from_the_installed_package(client):
     assert client.get("/bokeh/0.1/bokeh.min.js").status_code == 404
     assert client.get("/plots/dark.json").json.keys() == {"sky", "visibility", "night"}
     assert client.get("/plots/pink.json").status_code == 404
+
+
+def test_terms_are_told_apart_by_colour_blind_readers():
+    # Machado, Oliveira & Fernandes (2009), as colorspacious has it; a distance of 20 in CAM02-UCS is some
+    # ten times what the eye just tells (common practice, no source), and strips stand side by side.
+    from itertools import combinations
+
+    from colorspacious import cspace_convert, deltaE
+
+    from pinlight.ranking.html import TERM_COLOURS
+    from pinlight.resources import __file__ as package
+
+    sheet = (Path(package).parent / "faces" / "static" / "pinlight.css").read_text(encoding="utf-8")
+    pairs = dict(re.findall(r"--(\w+): light-dark\((#\w{6}, #\w{6})\)", sheet))
+    assert {name: pairs[name].split(", ")[0] for name in TERM_COLOURS} == TERM_COLOURS
+    for scheme in (0, 1):
+        written = [pairs[name].split(", ")[scheme] for name in (*TERM_COLOURS, "ground")]
+        colours = [[int(one[i : i + 2], 16) / 255 for i in (1, 3, 5)] for one in written]
+        for kind in (None, "deuteranomaly", "protanomaly", "tritanomaly"):
+            space = {"name": "sRGB1+CVD", "cvd_type": kind, "severity": 100} if kind else "sRGB1"
+            seen = np.clip(cspace_convert(np.array(colours), space, "sRGB1"), 0, 1)
+            for (a, one), (b, other) in combinations(zip(written, seen, strict=True), 2):
+                assert deltaE(one, other, input_space="sRGB1") > 20, (a, b, kind)

@@ -12,12 +12,12 @@ __all__ = ["TERM_COLOURS", "budget_strip", "ranking_html"]
 
 # Told apart in lightness as well as hue, also by colour-blind readers; the page's style sheet has them too.
 TERM_COLOURS = {
-    "diameter": "#17415a",
-    "photon": "#e3a72f",
-    "drift": "#5f9fb8",
-    "brightness": "#c9dba4",
-    "companion": "#a2425b",
-    "shape": "#7d6cab",
+    "diameter": "#222a57",
+    "photon": "#bc8f36",
+    "drift": "#5ca3bc",
+    "brightness": "#b4b9a8",
+    "companion": "#833c25",
+    "shape": "#6a5da3",
 }
 _LISTED = 10
 
