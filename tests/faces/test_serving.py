@@ -94,6 +94,23 @@ def test_ready_is_told_from_alive(catalogue, monkeypatch):
     assert client.get("/api/v1/health/live").status_code == 200
 
 
+def test_a_few_nights_are_planned_at_once_and_the_rest_are_told(client, monkeypatch):
+    from pinlight.faces import service
+
+    monkeypatch.setattr(service, "_WAIT_S", 0.05)
+    monkeypatch.setattr(service, "_PLANS_AT_ONCE", threading.BoundedSemaphore(1))
+    query = "targets=upsilon+And&array=north&mode=H&night=2026-12-01"
+    with service.planning():
+        body = {"targets": [{"name": "upsilon And"}], "array": "north", "mode": "H", "night": "2026-12-01"}
+        busy = client.post("/api/v1/plans", json=body)
+        assert (busy.status_code, busy.headers["Retry-After"]) == (503, "10")
+        assert "other nights are being planned" in json.loads(busy.data)["detail"]
+        page = client.get(f"/plan?{query}")
+        assert page.status_code == 503
+        assert "other nights are being planned" in page.text
+    assert client.get(f"/plan?{query}").status_code == 200
+
+
 def free_port():
     with socket.socket() as one:
         one.bind(("127.0.0.1", 0))

@@ -9,7 +9,7 @@ from pinlight.errors import InputError, NotFoundError
 from pinlight.faces.frame import address_question, form_context, render_page, with_defaults
 from pinlight.faces.library import plan_night
 from pinlight.faces.papers import plan_csv, plan_ics, plan_page, timeline
-from pinlight.faces.service import service
+from pinlight.faces.service import planning, service
 from pinlight.faces.setups import named_array
 from pinlight.faces.targets import requests_from_text, resolve_target
 from pinlight.planning.night import NightPlan, Request
@@ -57,18 +57,19 @@ def _plan(asked: dict[str, str]) -> NightPlan:
 
 def _plan_of(requests: list[Request], asked: dict[str, str]) -> NightPlan:
     arrays = service().arrays
-    return plan_night(
-        service().catalogue,
-        requests,
-        array=named_array(asked["array"], arrays),
-        stations=asked.get("stations"),
-        mode=asked.get("mode"),
-        night=asked.get("night"),
-        from_=asked.get("from"),
-        to=asked.get("to"),
-        edition=asked.get("edition"),
-        time_limit_s=_TIME_LIMIT_S,
-    )
+    with planning():
+        return plan_night(
+            service().catalogue,
+            requests,
+            array=named_array(asked["array"], arrays),
+            stations=asked.get("stations"),
+            mode=asked.get("mode"),
+            night=asked.get("night"),
+            from_=asked.get("from"),
+            to=asked.get("to"),
+            edition=asked.get("edition"),
+            time_limit_s=_TIME_LIMIT_S,
+        )
 
 
 @night.get("/plan.csv")

@@ -1,14 +1,16 @@
 """What the HTTP interface and the page share: the service they ask, and how questions are read."""
 
 import json
-from collections.abc import Callable
+import threading
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NamedTuple, TypeVar
 
 from flask import Response, current_app, request
 from pydantic import BaseModel, ValidationError
 from werkzeug.datastructures import MultiDict
-from werkzeug.exceptions import BadRequest
+from werkzeug.exceptions import BadRequest, ServiceUnavailable
 
 from pinlight.arrays.files import Array, describe
 from pinlight.catalogue.store import Catalogue
@@ -32,10 +34,14 @@ __all__ = [
     "answer_ranking",
     "as_asked",
     "from_query",
+    "planning",
     "posted_json",
     "read_question",
     "service",
 ]
+
+_PLANS_AT_ONCE = threading.BoundedSemaphore(2)
+_WAIT_S = 20.0
 
 Question = TypeVar("Question", bound=BaseModel)
 
@@ -98,6 +104,23 @@ def posted_json() -> Any:
         raise InputError("the body is nested too deeply") from error
 
 
+@contextmanager
+def planning() -> Iterator[None]:
+    """A turn at planning a night, which keeps a processor busy for seconds: a few at once, the rest wait.
+
+    Raises
+    ------
+    ServiceUnavailable
+        If no turn comes in time.
+    """
+    if not _PLANS_AT_ONCE.acquire(timeout=_WAIT_S):
+        raise ServiceUnavailable("other nights are being planned; ask again in a little while", retry_after=10)
+    try:
+        yield
+    finally:
+        _PLANS_AT_ONCE.release()
+
+
 def answer_plan(question: PlanQuestion) -> NightPlan:
     """The night plan that a question asks for."""
     known = service()
@@ -115,12 +138,13 @@ def answer_plan(question: PlanQuestion) -> NightPlan:
                 parse_utc(one.to, f"to of {target.name}") if one.to else None,
             )
         )
-    return plan_night(
-        known.catalogue,
-        requests,
-        array=named_array(question.array, known.arrays),
-        **question.model_dump(exclude={"targets", "array"}),
-    )
+    with planning():
+        return plan_night(
+            known.catalogue,
+            requests,
+            array=named_array(question.array, known.arrays),
+            **question.model_dump(exclude={"targets", "array"}),
+        )
 
 
 def answer_ranking(question: RankingQuestion) -> Ranking:
