@@ -1,5 +1,6 @@
 """Speed of the main jobs beside their peers; medians, in one run. `python -m tests.bench`"""
 
+import json
 import os
 import statistics
 import subprocess
@@ -13,18 +14,12 @@ from typing import Any
 import numpy as np
 
 from pinlight.catalogue.making import make_catalogue
-from pinlight.catalogue.seed import read_seed
-from pinlight.diameters.prediction import StarPhotometry, predict_diameters
-from pinlight.diameters.relations import load_relations
 from pinlight.faces.setups import known_arrays
-from pinlight.photometry.bands import default_errors
-from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.planning.night import Request, plan_night
 from pinlight.ranking.clock import night_clock
 from pinlight.ranking.rank import rank
 from pinlight.ranking.setup import setup_of
 from pinlight.ranking.target import Target
-from pinlight.sky.positions import galactic_latitude_deg
 from tests.bench.page import measure_page
 
 
@@ -116,34 +111,14 @@ def main() -> None:
         median_s(lambda: plan_night(columns, wanted, setup, clock, time_limit_s=limit_s), 3),
     )
 
-    seed = read_seed()
-    count = len(seed.names)
-    errors = np.stack(
-        [default_errors(band, seed.magnitudes[:, i]) for i, band in enumerate(CATALOGUE_BANDS)], axis=1
-    )
-    latitude = galactic_latitude_deg(seed.ra_deg, seed.dec_deg)
-
-    def photometry(rows: slice) -> StarPhotometry:
-        return StarPhotometry(
-            seed.magnitudes[rows],
-            errors[rows],
-            seed.spectral_types[rows],
-            seed.parallax_mas[rows],
-            latitude[rows],
-        )
-
-    relations = load_relations()
-    sample = 300
-
-    def one_by_one() -> None:
-        for row in range(sample):
-            predict_diameters(photometry(slice(row, row + 1)), relations)
-
+    program = [sys.executable, "-m", "tests.bench.diameters"]
+    runs = [json.loads(subprocess.run(program, check=True, capture_output=True).stdout) for _ in range(3)]
+    middle = sorted(runs, key=lambda run: run["seconds"])[1]
     show(
-        f"diameters of {count} stars",
-        median_s(lambda: predict_diameters(photometry(slice(None)), relations), 3),
+        f"diameters of a million stars, {middle['peak_gb']:.2f} GB",
+        middle["seconds"],
         "star by star",
-        median_s(one_by_one, 1) * count / sample,
+        middle["loop_seconds"],
     )
     measure_page(catalogue)
     show("pinlight --help (process)", command_s("--help"))

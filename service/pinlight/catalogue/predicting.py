@@ -9,11 +9,11 @@ from sqlalchemy import Connection, select
 
 from pinlight.catalogue.changes import Changing
 from pinlight.catalogue.database import bulk_insert, rows_in
-from pinlight.catalogue.recompute import diameter_rows
+from pinlight.catalogue.diameters import diameter_rows
 from pinlight.catalogue.standings import must_exist
 from pinlight.catalogue.tables import Diameter, Magnitude, Star
 from pinlight.diameters.prediction import StarPhotometry, predict_diameters
-from pinlight.diameters.relations import load_relations
+from pinlight.diameters.relations import RelationSet, load_relations
 from pinlight.photometry.bands import BANDS
 from pinlight.photometry.systems import CATALOGUE_BANDS
 from pinlight.sky.positions import galactic_latitude_deg
@@ -144,10 +144,11 @@ def first_diameters(change: Changing, star_ids: Sequence[int], photometry: StarP
     bulk_insert(change.connection, Diameter, (row | {"change_id": change_id} for row in rows))
 
 
-def renew_diameters(change: Changing, star_ids: Iterable[int]) -> int:
+def renew_diameters(change: Changing, star_ids: Iterable[int], relation_set: RelationSet | None = None) -> int:
     """Predict the diameters of some stars anew from the magnitudes that count.
 
-    Diameters that they had and that change are kept in the log.
+    Diameters that they had and that change are kept in the log. Without a relation set the shipped
+    one is used.
 
     Returns
     -------
@@ -157,7 +158,8 @@ def renew_diameters(change: Changing, star_ids: Iterable[int]) -> int:
     ids = sorted(set(star_ids))
     if not ids:
         return 0
-    diameters = predict_diameters(_photometry(change.connection, ids), load_relations())
+    photometry = _photometry(change.connection, ids)
+    diameters = predict_diameters(photometry, relation_set or load_relations())
     rows = list(diameter_rows(diameters, ids))
     query = select(Diameter.__table__)
     known = {row.star_id: row._mapping for row in rows_in(change.connection, query, Diameter.star_id, ids)}

@@ -1,114 +1,64 @@
-"""Diameters as rows of the catalogue, and their re-computation."""
+"""Diameters of a whole catalogue predicted anew when the relation set changes."""
 
-import json
-from collections.abc import Iterable, Iterator, Mapping
-from typing import Any
+from collections.abc import Callable
 
-import numpy as np
-from numpy.typing import NDArray
+from sqlalchemy import ColumnElement, func, or_, select
 
-from pinlight.diameters.limb_darkening import coefficients, uniform_disk_by_band
-from pinlight.diameters.prediction import Diameters
-from pinlight.diameters.spectral import LUMINOSITY_GROUPS, luminosity_probabilities, parse_spectral_type
-from pinlight.photometry.extinction import relative_extinction
+from pinlight.catalogue.predicting import renew_diameters
+from pinlight.catalogue.store import Catalogue
+from pinlight.catalogue.tables import Diameter, Star
+from pinlight.diameters.relations import RelationSet
 
-__all__ = ["diameter_rows", "explain_diameter"]
+__all__ = ["recompute_diameters"]
 
-_ENCODER = json.JSONEncoder(separators=(",", ":"))
+_BATCH = 5_000
 
 
-def diameter_rows(diameters: Diameters, star_ids: Iterable[int]) -> Iterator[dict[str, Any]]:
-    """Rows of the table of diameters, one for each star."""
+def recompute_diameters(
+    catalogue: Catalogue,
+    relation_set: RelationSet,
+    progress: Callable[[int, int], object] | None = None,
+    batch: int = _BATCH,
+) -> int:
+    """Predict anew the diameters of all stars that another relation set, or none, was used for.
 
-    def or_none(values: NDArray[Any]) -> list[float | None]:
-        return [None if value != value else value for value in values.tolist()]  # NaN is not itself
-
-    # Six digits after the point: the last bits of linear algebra differ between machines.
-    columns = {
-        name: or_none(getattr(diameters, name).astype(np.float64).round(6))
-        for name in (
-            "limb_darkened_mas", "own_error_mas", "shared_error_mas", "chi_squared", "probability",
-            "av_mag", "av_error_mag", "spectral_code", "teff_k", "logg",
-        )
-    }  # fmt: skip
-    log_thetas, weights, pulls = (
-        array.astype(np.float64).round(4).tolist()
-        for array in (diameters.log_thetas, diameters.weights, diameters.pulls)
-    )
-    names, groups = diameters.relation_set.names, diameters.luminosity_group.tolist()
-    for row, star_id in enumerate(star_ids):
-        parts = {
-            name: [log_theta, weight, None if pull != pull else pull]
-            for name, log_theta, weight, pull in zip(
-                names, log_thetas[row], weights[row], pulls[row], strict=True
-            )
-            if weight == weight
-        }
-        yield {
-            "star_id": star_id,
-            **{name: values[row] for name, values in columns.items()},
-            "degrees_of_freedom": int(diameters.degrees_of_freedom[row]),
-            "discordant": bool(diameters.discordant[row]),
-            "culprit": diameters.culprit_name(row),
-            "luminosity_group": groups[row],
-            "relation_set": diameters.relation_set.hash,
-            "parts": _ENCODER.encode(parts),
-        }
-
-
-def explain_diameter(
-    row: Mapping[str, Any], spectral_type: str, parallax_mas: float | None, magnitudes: Mapping[str, float]
-) -> dict[str, Any] | None:
-    """How a star's diameter came about, ready for JSON; None where it has none.
+    Goes through the catalogue in batches, each a transaction and a change of its own: stopped at any
+    point, the next call goes on from there. What stood there before is kept in the change log. Editions
+    stay as they are; freeze one for rankings to see the new diameters.
 
     Parameters
     ----------
-    row : mapping
-        Its row of the table of diameters.
-    spectral_type, parallax_mas, magnitudes
-        Of the star, magnitudes by band: they tell how sure its luminosity group is.
+    catalogue : Catalogue
+    relation_set : RelationSet
+    progress : function of done and total
+    batch : int
+        Stars in one transaction.
+
+    Returns
+    -------
+    count : int
+        How many stars were predicted anew.
+
+    Raises
+    ------
+    TokenError, NotAllowedError
+        If the one who acts is no keeper.
     """
-    theta = row["limb_darkened_mas"]
-    if theta is None:
-        return None
-    own, shared = row["own_error_mas"], row["shared_error_mas"]
-    teff, logg = (np.nan if row[key] is None else row[key] for key in ("teff_k", "logg"))
-    u = coefficients(np.array([teff]), np.array([logg]))[0]
-    group = parse_spectral_type(spectral_type).group
-    # A stated class needs no dust, whose law is slow to load.
-    in_ks = 0.0 if group else relative_extinction("Ks") * row["av_mag"]
-    v, ks = magnitudes.get("V", np.nan) - row["av_mag"], magnitudes.get("Ks", np.nan) - in_ks
-    probabilities = luminosity_probabilities(
-        np.array([group]),
-        np.array([v - ks]),
-        np.array([ks]),
-        np.array([np.nan if parallax_mas is None else parallax_mas]),
-    )[0]
-    return {
-        "limb_darkened_mas": theta,
-        "uniform_disk_mas_by_band": None if np.isnan(u).any() else uniform_disk_by_band(theta, u),
-        "own_error_mas": own,
-        "shared_error_mas": shared,
-        "error_mas": round((own**2 + shared**2) ** 0.5, 6),
-        **{
-            key: row[key]
-            for key in (
-                "chi_squared", "degrees_of_freedom", "probability", "discordant", "culprit", "av_mag",
-                "av_error_mag", "luminosity_group",
-            )
-        },
-        "luminosity_probabilities": {
-            name: round(float(value), 3) for name, value in zip(LUMINOSITY_GROUPS, probabilities, strict=True)
-        },
-        **{key: row[key] for key in ("teff_k", "logg", "relation_set")},
-        "relations": [
-            {
-                "relation": name,
-                "diameter_mas": round(10**log_theta, 5),
-                "weight": weight,
-                "residual_percent": round(100 * (10**log_theta / theta - 1), 2),
-                "pull": pull,
-            }
-            for name, (log_theta, weight, pull) in json.loads(row["parts"]).items()
-        ],
-    }  # fmt: skip
+    old: ColumnElement[bool] = or_(Diameter.star_id.is_(None), Diameter.relation_set != relation_set.hash)
+    of_stars = Star.__table__.outerjoin(Diameter.__table__, Diameter.star_id == Star.id)
+    catalogue.person().require("keeper", "re-compute diameters")
+    with catalogue.reading() as connection:
+        total = int(connection.execute(select(func.count()).select_from(of_stars).where(old)).scalar_one())
+    done = after = 0
+    tell = progress or (lambda *_: None)
+    tell(done, total)
+    query = select(Star.id).select_from(of_stars).where(old).order_by(Star.id).limit(batch)
+    detail = {"relation_set": relation_set.hash, "relations_file": relation_set.file or None}
+    while True:
+        with catalogue.changing("recompute", "keeper", "re-compute diameters", detail) as change:
+            ids = list(change.connection.execute(query.where(Star.id > after)).scalars())
+            renew_diameters(change, ids, relation_set)
+        if not ids:
+            return done
+        done, after = done + len(ids), ids[-1]
+        tell(done, max(total, done))

@@ -13,9 +13,9 @@ from sqlalchemy import insert
 
 from pinlight.catalogue.changes import Changing
 from pinlight.catalogue.database import bulk_insert
+from pinlight.catalogue.diameters import diameter_rows
 from pinlight.catalogue.names import name_key, short_keys
 from pinlight.catalogue.predicting import NEIGHBOUR_ARCSEC, or_none
-from pinlight.catalogue.recompute import diameter_rows
 from pinlight.catalogue.tables import Companion, Diameter, Identifier, Magnitude, Source, Star
 from pinlight.diameters.prediction import StarPhotometry, predict_diameters
 from pinlight.diameters.relations import load_relations

@@ -23,11 +23,11 @@ from pinlight.catalogue.database import (
     snapshot,
     writing,
 )
+from pinlight.catalogue.diameters import explain_diameter
 from pinlight.catalogue.editions import open_edition, record_edition
 from pinlight.catalogue.members import Person, person_of
 from pinlight.catalogue.names import key_beginnings, name_key
 from pinlight.catalogue.predicting import merged_stars, preferred, root_of
-from pinlight.catalogue.recompute import explain_diameter
 from pinlight.catalogue.standings import (
     STANDINGS,
     must_exist,

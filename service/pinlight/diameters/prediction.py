@@ -218,8 +218,13 @@ def predict_diameters(stars: StarPhotometry, relation_set: RelationSet) -> Diame
 
 
 def _extinction(stars: StarPhotometry, rows: slice) -> tuple[Floats, Floats]:
-    """A_V and its error: what is given with a star, else the prior."""
-    av, av_error = extinction_prior(stars.parallax_mas[rows], stars.galactic_latitude_deg[rows])
+    """A_V and its error: what is given with a star, else the prior; none without a parallax.
+
+    The prior would put a star without one behind all the dust there is.
+    """
+    parallax = stars.parallax_mas[rows]
+    near = np.where(np.isfinite(parallax), parallax, np.inf)
+    av, av_error = extinction_prior(near, stars.galactic_latitude_deg[rows])
     if stars.av_mag is not None:
         given = np.isfinite(stars.av_mag[rows])
         av = np.where(given, stars.av_mag[rows], av)

@@ -16,6 +16,7 @@ from pinlight.faces.options import as_json as _as_json
 from pinlight.faces.options import db as _db
 from pinlight.faces.options import print_json as _print_json
 from pinlight.faces.options import say as _say
+from pinlight.faces.relations import relations, relations_file_option
 from pinlight.version import __version__
 
 if TYPE_CHECKING:
@@ -119,6 +120,7 @@ for _command in (
     curate.merge,
     curate.split,
     curate.undo,
+    relations,
 ):
     main.add_command(_command)
 
@@ -232,13 +234,6 @@ def _magnitude_options(function: Callable[..., Any]) -> Callable[..., Any]:
     return function
 
 
-def _relations_file(function: Callable[..., Any]) -> Callable[..., Any]:
-    return click.option(
-        "--relations", "relations_file", type=click.Path(path_type=Path), metavar="FILE",
-        help="Relations of your own, a CSV file like relations.csv; a shipped one's name takes its place.",
-    )(function)  # fmt: skip
-
-
 @main.command()
 @_magnitude_options
 @click.option("--spectral-type", default="", help="Such as K1III.")
@@ -251,7 +246,7 @@ def _relations_file(function: Callable[..., Any]) -> Callable[..., Any]:
 @click.option(
     "--from", "file", type=click.Path(path_type=Path), help="Stars of a CSV, ECSV, VOTable or FITS file."
 )
-@_relations_file
+@relations_file_option
 @_as_json
 def diameter(file: Path | None, band: str, relations_file: Path | None, as_json: bool, **options: Any) -> None:
     """A diameter from magnitudes, two bands or more, or the diameters of a table of stars.
@@ -262,13 +257,13 @@ def diameter(file: Path | None, band: str, relations_file: Path | None, as_json:
     from pinlight.diameters.relations import load_relations
     from pinlight.faces.diameter import StarRow, predict_diameter, predict_rows, read_stars
 
-    relations = load_relations(relations_file)
+    relation_set = load_relations(relations_file)
     given = {key: value for key, value in options.items() if value not in (None, "")}
     if file is not None:
         if given:
             raise InputError(f"from and {next(iter(given))} are both given; give one or the other")
         rows = read_stars(file)
-        found = iter(predict_rows([row for row in rows if isinstance(row, StarRow)], band, relations))
+        found = iter(predict_rows([row for row in rows if isinstance(row, StarRow)], band, relation_set))
         answers = [
             next(found) if isinstance(row, StarRow) else {"name": row[0], "diameter": None, "reason": row[1]}
             for row in rows
@@ -281,7 +276,9 @@ def diameter(file: Path | None, band: str, relations_file: Path | None, as_json:
             raise InputError(f"{'dec_deg' if place[1] is None else 'ra_deg'} is missing; give both or neither")
         position = None if place[0] is None else place
         answers = [
-            predict_diameter(magnitudes, errors, position_deg=position, band=band, relations=relations, **given)
+            predict_diameter(
+                magnitudes, errors, position_deg=position, band=band, relations=relation_set, **given
+            )
         ]
     if as_json:
         _print_json(answers if file is not None else answers[0])
@@ -292,47 +289,6 @@ def diameter(file: Path | None, band: str, relations_file: Path | None, as_json:
         show_diameter(answers[0])
     else:
         show_diameters(answers)
-
-
-@main.group(invoke_without_command=True)
-@_relations_file
-@_as_json
-@click.pass_context
-def relations(context: click.Context, relations_file: Path | None, as_json: bool) -> None:
-    """List the surface-brightness–colour relations: those in use, and those only carried."""
-    if context.invoked_subcommand is not None:
-        return
-    from pinlight.diameters.relations import load_relations
-    from pinlight.faces.show import relation_facts, show_relations
-
-    relation_set = load_relations(relations_file)
-    if as_json:
-        _print_json(relation_facts(relation_set))
-    else:
-        show_relations(relation_facts(relation_set))
-
-
-@relations.command("check")
-@_relations_file
-@click.option("--measured", type=click.Path(path_type=Path), metavar="FILE", help="Measured stars of your own.")
-@_as_json
-def check_relations_(relations_file: Path | None, measured: Path | None, as_json: bool) -> None:
-    """Hold each relation against measured stars and the Sun: bias and spread by class and colour."""
-    from pinlight.diameters.relations import load_relations
-    from pinlight.diameters.validation import check_relations, read_measured
-    from pinlight.faces.show import show_relation_checks
-    from pinlight.resources import measured_file
-
-    relation_set = load_relations(relations_file)
-    answer = {
-        "relation_set": relation_set.hash,
-        "relations_file": relation_set.file or None,
-        "checks": check_relations(relation_set, read_measured(measured or measured_file())),
-    }
-    if as_json:
-        _print_json(answer)
-    else:
-        show_relation_checks(answer)
 
 
 @main.group()

@@ -119,8 +119,6 @@ def predict_rows(
     def column(values: list[float | None]) -> Any:
         return np.array([np.nan if value is None else value for value in values], dtype=float)
 
-    # Without a distance the prior would put the star behind all the dust there is.
-    av = [0.0 if row.av_mag is None and row.parallax_mas is None else row.av_mag for row in rows]
     result = predict_diameters(
         StarPhotometry.of(
             bands,
@@ -129,7 +127,7 @@ def predict_rows(
             [row.spectral_type for row in rows],
             column([row.parallax_mas for row in rows]),
             column([row.galactic_latitude_deg for row in rows]),
-            column(av),
+            column([row.av_mag for row in rows]),
             column([row.av_error_mag for row in rows]),
         ),
         relations or load_relations(),
