@@ -67,12 +67,12 @@ def test_sets_have_windows_in_which_all_their_stars_are_in_reach_under_one_setti
             for place in (clock.apparent(TARGET.ra_deg, TARGET.dec_deg), *places):
                 assert clock.observable(*place, inside).all()
                 assert holds(clock, one.coarse_paths_m, place, inside).all()
-    named = rank_named(
+    ranking = rank_named(
         catalogue, TARGET, array=north, mode="H", night="2026-12-01",
         with_=[c.name for c in answer.calibrators[:2]],
-    ).named_set  # fmt: skip
-    assert named.windows
-    assert named.to_dict()["window_utc"]
+    )  # fmt: skip
+    assert ranking.named_set.windows
+    assert ranking.named_set.to_dict(ranking.names)["window_utc"]
 
 
 def test_baselines_are_those_of_the_whole_window(answer, north):
