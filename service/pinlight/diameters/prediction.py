@@ -44,7 +44,7 @@ _LEAST_PROBABILITY = 0.05
 # V - Ks = -1.0, J - Ks = -0.25 (Pecaut & Mamajek 2013, ApJS 208, 9; memory).
 _BLUEST = {("B", "V"): -0.65, ("V", "Ks"): -1.3, ("V", "J"): -1.1, ("B", "Ks"): -1.6, ("J", "Ks"): -0.6}
 # By how much V - Ks may differ from what the spectral type says: a subclass or two of misclassification,
-# metallicity and dust; beyond it lie 0.5 % of the seed's stars.
+# metallicity and dust; beyond it lies about 1 % of the seed's classed stars.
 _TYPE_TOLERANCE_MAG, _TYPE_TOLERANCE_SUBCLASSES = 0.35, 4.0
 
 
