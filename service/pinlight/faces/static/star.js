@@ -1,7 +1,7 @@
 // A star's view: recording a judgement with a member's token.
 "use strict";
 
-const form = document.getElementById("judge");
+const form = document.getElementById("judge-form");
 const TOKEN = "pinlight-token";
 
 const stored = () => {
