@@ -66,28 +66,35 @@ def seeded_database(server: postgresql.Server, seeded_path: Path) -> str:
 
 
 @pytest.fixture(params=["sqlite", "postgresql"])
-def empty_url(request: pytest.FixtureRequest, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> str:
+def empty_url(request: pytest.FixtureRequest, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[str]:
     """Where a catalogue may be made, on either database."""
     monkeypatch.setenv("PINLIGHT_EDITIONS", str(tmp_path / "editions"))
     if request.param == "sqlite":
-        return f"sqlite:///{tmp_path / 'test.db'}"
-    return str(request.getfixturevalue("server").new_database())
+        yield f"sqlite:///{tmp_path / 'test.db'}"
+        return
+    server = request.getfixturevalue("server")
+    url = server.new_database()
+    yield url
+    server.drop(url)
 
 
 @pytest.fixture(params=["sqlite", "postgresql"])
 def seeded_url(
     request: pytest.FixtureRequest, tmp_path: Path, seeded_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> str:
+) -> Iterator[str]:
     """A catalogue with the seed in it, on either database, to be changed at will."""
     if request.param == "sqlite":
         copy_tree(f"{seeded_path}.editions", tmp_path / "editions")
         monkeypatch.setenv("PINLIGHT_EDITIONS", str(tmp_path / "editions"))
         (tmp_path / "test.db").write_bytes(seeded_path.read_bytes())
-        return f"sqlite:///{tmp_path / 'test.db'}"
+        yield f"sqlite:///{tmp_path / 'test.db'}"
+        return
     server, template = (request.getfixturevalue(name) for name in ("server", "seeded_database"))
     copy_tree(f"{seeded_path}.editions", tmp_path / "editions")
     monkeypatch.setenv("PINLIGHT_EDITIONS", str(tmp_path / "editions"))
-    return str(server.new_database(template))
+    url = server.new_database(template)
+    yield url
+    server.drop(url)
 
 
 def copy_tree(source: str, target: Path) -> None:

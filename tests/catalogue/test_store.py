@@ -87,13 +87,14 @@ def test_columns_agree_with_the_database(catalogue):
     assert sorted(used) == sorted(part["relation"] for part in star["diameter"]["relations"])
 
 
-def test_the_same_content_has_the_same_edition_on_either_database(catalogue, empty_url):
-    again = make_catalogue(empty_url)
+def test_the_same_content_has_the_same_edition_on_either_database(catalogue, seeded_url):
+    # One of them was filled on SQLite, the other on PostgreSQL.
+    again = make_catalogue(seeded_url)
     assert again.editions()[0]["name"] == catalogue.editions()[0]["name"]
     assert again.freeze() == again.editions()[0]["name"]
     assert len(again.editions()) == 1
     again.close()
-    again = make_catalogue(empty_url)  # a second time changes nothing
+    again = make_catalogue(seeded_url)  # a second time changes nothing
     assert len(again.editions()) == 1
     again.close()
 
