@@ -28,10 +28,10 @@ FORMATS = ("json", *CONTENT_TYPES)
 
 _WRITING = threading.Lock()  # warning filters belong to the whole process
 
-# The last word of a name is its unit; here as VOUnit 1.0 writes it.
+# The last word of a name is its unit; here as VOUnit 1.0 writes it, which has no per cent.
 _UNITS = {
     "_mas_yr": "mas/yr", "_km_s": "km/s", "_deg": "deg", "_arcsec": "arcsec", "_mas": "mas", "_um": "um",
-    "_m": "m", "_mag": "mag", "_percent": "%", "_min": "min", "_ms": "ms", "_s": "s", "_k": "K",
+    "_m": "m", "_mag": "mag", "_min": "min", "_ms": "ms", "_s": "s", "_k": "K",
 }  # fmt: skip
 # IVOA UCD1+ vocabulary (1.5) of the columns that have a word there.
 _UCDS = {
@@ -43,7 +43,7 @@ _UCDS = {
     "uniform_disk_diameter": "phys.angSize;src", "error_mas": "stat.error;phys.angSize",
     "own_error": "stat.error;phys.angSize", "own_error_mas": "stat.error;phys.angSize",
     "shared_error": "stat.error.sys;phys.angSize", "shared_error_mas": "stat.error.sys;phys.angSize",
-    "calibration_error": "stat.error", "calibration_error_percent": "stat.error", "flags": "meta.code",
+    "calibration_error_percent": "stat.error", "flags": "meta.code",
     "standing": "meta.code.qual", "pm_ra_mas_yr": "pos.pm;pos.eq.ra", "pm_dec_mas_yr": "pos.pm;pos.eq.dec",
     "parallax_mas": "pos.parallax", "radial_velocity_km_s": "spect.dopplerVeloc",
     "start_utc": "time.start", "end_utc": "time.end", "edition": "meta.version",

@@ -209,8 +209,9 @@ class Ranking:
 
         stars = self.calibrators
         percent = {
-            f"{name}_error": [math.nan if (term := star.budget[name]) is None else 100 * term for star in stars]
-            * units.percent
+            f"{name}_error_percent": [
+                math.nan if (term := star.budget[name]) is None else 100 * term for star in stars
+            ]
             for name in TERMS
         }
         return QTable(
@@ -229,7 +230,7 @@ class Ranking:
                 "v2_min": [star.v2_min for star in stars],
                 "v2_max": [star.v2_max for star in stars],
                 **percent,
-                "calibration_error": [100 * star.calibration_error for star in stars] * units.percent,
+                "calibration_error_percent": [100 * star.calibration_error for star in stars],
             },
             meta={
                 "edition": self.edition,
