@@ -65,9 +65,14 @@ class Clock:
         return np.asarray(np.linalg.norm(self._xyz_m[first] - self._xyz_m[second], axis=-1))
 
     @cached_property
+    def walled(self) -> list[Station]:
+        """Stations with a horizon that rises above the altitude limit somewhere."""
+        return _walled(self.array, self.stations)
+
+    @cached_property
     def fine_times(self) -> Floats:
         """Times of the same span, three minutes apart or one."""
-        step_min = _WALLED_STEP_MIN if _walled(self.array, self.stations) else _FINE_STEP_MIN
+        step_min = _WALLED_STEP_MIN if self.walled else _FINE_STEP_MIN
         return _even_times(float(self.times[0]), float(self.times[-1]), step_min)
 
     def every(self, step_min: float) -> Floats:
@@ -180,9 +185,9 @@ class Clock:
         lowest = self.array.limits.altitude_min_deg
         height = np.sin(latitude) * np.sin(d) + np.cos(latitude) * np.cos(d) * np.cos(h)
         holds = height >= np.sin(np.radians(lowest))
-        if walled := _walled(self.array, self.stations):
+        if self.walled:
             altitude, azimuth = altitude_azimuth_deg(hour_angle, dec_deg, self.site.latitude_deg)
-            for station in walled:
+            for station in self.walled:
                 holds &= altitude >= self.horizon_deg(station, azimuth)
         return np.asarray(holds)
 
@@ -250,7 +255,6 @@ def night_clock(array: Array, stations: tuple[Station, ...], night: str) -> Cloc
 
 
 def _walled(array: Array, stations: tuple[Station, ...]) -> list[Station]:
-    """Stations with a horizon that rises above the altitude limit somewhere."""
     lowest = array.limits.altitude_min_deg
     return [s for s in stations if max((height for _, height in s.horizon), default=0.0) > lowest]
 

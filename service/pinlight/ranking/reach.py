@@ -218,9 +218,10 @@ class TargetReach:
         if self.settings is not None:
             return None
         clock, limits, fine = self.clock, self.clock.array.limits, self.clock.fine_times
+        horizons = " and the stations' horizons" if clock.walled else ""
         conditions = {
             f"the Sun is never below {limits.sun_altitude_max_deg:g} deg": clock.dark(fine),
-            f"it never rises above {limits.altitude_min_deg:g} deg": clock.above(*self.place, fine),
+            f"it never rises above {limits.altitude_min_deg:g} deg{horizons}": clock.above(*self.place, fine),
             f"the Moon is always within {limits.moon_distance_min_deg:g} deg": clock.moon_clear(
                 *self.place, fine
             ),
