@@ -30,7 +30,7 @@ Bools = NDArray[np.bool_]
 _MINUTE_DAY = 1 / 1440
 # What a ranking looks at first, and what windows and the choice of coarse settings are made of. With a
 # horizon above the altitude limit both are the last: a mast may hide a star for a few minutes only.
-_STEP_MIN, _FINE_STEP_MIN, _WALLED_STEP_MIN = 10.0, 3.0, 1.0
+_STEP_MIN, _FINE_STEP_MIN, _WALLED_STEP_MIN = 10.0, 4.0, 1.0
 _MOST_STEPS = 20_000
 _LONGEST_SPAN_DAY = 2.0
 
@@ -71,7 +71,7 @@ class Clock:
 
     @cached_property
     def fine_times(self) -> Floats:
-        """Times of the same span, three minutes apart or one."""
+        """Times of the same span, four minutes apart or one."""
         step_min = _WALLED_STEP_MIN if self.walled else _FINE_STEP_MIN
         return _even_times(float(self.times[0]), float(self.times[-1]), step_min)
 
