@@ -1,6 +1,7 @@
 import gzip
 import json
 import os
+import re
 import signal
 import socket
 import subprocess
@@ -13,6 +14,7 @@ import urllib.request
 import pytest
 
 from pinlight.faces.http import create_app
+from pinlight.resources import seed_folder
 
 RANKING = "/api/v1/rankings?target=tau+Cet&array=north&mode=H"
 
@@ -64,6 +66,20 @@ def test_an_answer_that_has_not_changed_is_not_sent_or_worked_out_again(seeded_u
     again = client.get(address, headers={"If-None-Match": tag})
     assert again.status_code == 200
     assert again.json["standing"] == "doubted"
+
+
+def test_an_array_file_that_has_changed_changes_the_tag(catalogue, tmp_path):
+    file = tmp_path / "south.toml"
+    text = (seed_folder() / "arrays" / "south.toml").read_text(encoding="utf-8")
+    question = "/api/v1/rankings?target=HD+117521&array=south&mode=H"
+    tags, errors = [], []
+    for spread in ("0.03", "0.5"):
+        file.write_text(re.sub(r"(?m)^spread = .*$", f"spread = {spread}", text), encoding="utf-8")
+        answer = create_app(catalogue, arrays_folder=tmp_path).test_client().get(question)
+        tags.append(answer.headers["ETag"])
+        errors.append(answer.json["calibrators"][0]["calibration_error_percent"])
+    assert tags[0] != tags[1]
+    assert errors[1] > 5 * errors[0]
 
 
 def test_bad_questions_have_no_tag(client):

@@ -72,11 +72,13 @@ def _unchanged() -> Response | None:
     g.tag = None
     if request.method not in ("GET", "HEAD") or not request.path.startswith(_REPEATABLE):
         return None
+    known = service()
     try:
-        revision = service().catalogue.revision()
+        revision = known.catalogue.revision()
     except CatalogueError:
         return None  # the answer itself will say so
-    state = "\n".join([__version__, revision, request.full_path])
+    arrays = repr(sorted(known.arrays.items()))
+    state = "\n".join([__version__, revision, arrays, request.full_path])
     g.tag = hashlib.sha256(state.encode("utf-8", "surrogatepass")).hexdigest()[:24]
     if request.if_none_match.contains_weak(g.tag):
         return Response(status=304)
